@@ -1,5 +1,22 @@
 """Folds, gains, p values and verdicts: what the held-out scores say about the accounts."""
 
+from ._boundary import cone_weights, count_parameters, likelihood_ratio_p, mixture_weights
 from ._folds import block_of, block_size, fold_of, training_rows
+from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
 
-__all__ = ["block_of", "block_size", "fold_of", "training_rows"]
+__all__ = [
+    "block_of",
+    "block_size",
+    "fold_of",
+    "training_rows",
+    "Gain",
+    "gain",
+    "paired_difference",
+    "ResampledT",
+    "corrected_resampled_t",
+    "holm",
+    "cone_weights",
+    "mixture_weights",
+    "likelihood_ratio_p",
+    "count_parameters",
+]
