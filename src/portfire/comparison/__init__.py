@@ -3,6 +3,16 @@
 from ._boundary import cone_weights, count_parameters, likelihood_ratio_p, mixture_weights
 from ._folds import block_of, block_size, fold_of, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
+from ._verdict import (
+    Evidence,
+    Verdict,
+    describe_mimic,
+    judge,
+    overrule,
+    rate_route,
+    reconcile,
+    trials_to_close,
+)
 
 __all__ = [
     "block_of",
@@ -19,4 +29,12 @@ __all__ = [
     "mixture_weights",
     "likelihood_ratio_p",
     "count_parameters",
+    "Evidence",
+    "Verdict",
+    "judge",
+    "rate_route",
+    "trials_to_close",
+    "reconcile",
+    "overrule",
+    "describe_mimic",
 ]

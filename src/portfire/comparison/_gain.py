@@ -139,7 +139,9 @@ def gain(diff_per_trial: ArrayLike, n_params: int, n_train: float, n_folds: int)
     """
     diff = np.asarray(diff_per_trial, dtype=float)
     if diff.ndim != 1 or diff.size < 2:
-        raise PortfireError(f"a gain needs one difference a trial, of two trials or more; got shape {diff.shape}")
+        raise PortfireError(
+            f"a gain needs one difference a trial, of two trials or more; got shape {diff.shape}"
+        )
     if n_folds < 2 or n_train <= 0 or n_params < 0:
         raise PortfireError(
             f"a gain needs n_folds >= 2, n_train > 0 and n_params >= 0; got {n_folds}, {n_train}, {n_params}"
