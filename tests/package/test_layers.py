@@ -59,9 +59,9 @@ def imports_of(path: Path) -> list[tuple[str, int]]:
 
 
 def target_layer(name: str) -> str | None:
-    """The layer that an imported name belongs to; None for the version and for other packages."""
+    """The layer that an imported name belongs to; None for `__version__`, its like, and other packages."""
     first, *rest = name.split(".")
-    if first != "portfire" or not rest or rest[0] == "__version__":
+    if first != "portfire" or not rest or rest[0].startswith("__"):
         return None
     return portfire._HOME_OF.get(rest[0], rest[0])
 
@@ -71,7 +71,7 @@ def upward_imports(path: Path) -> list[str]:
     found = []
     for name, line in imports_of(path):
         target = target_layer(name)
-        if target is not None and LAYERS.index(target) > LAYERS.index(own):
+        if target is not None and target not in LAYERS[: LAYERS.index(own) + 1]:
             found.append(f"{path.relative_to(SOURCE)}:{line} imports {name}")
     return found
 
