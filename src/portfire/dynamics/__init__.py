@@ -1,0 +1,35 @@
+"""Kinds of dynamics, readouts and model files."""
+
+from portfire.dynamics._linear import (
+    Params,
+    PathPrior,
+    accumulated_noise,
+    initial_covariance,
+    parameter_shapes,
+    path_inputs,
+    path_prior,
+)
+from portfire.dynamics._models import find_model, shipped_models
+from portfire.dynamics._readouts import READOUTS, Curvature, Readout
+from portfire.dynamics._setup import Setup, make_setup
+from portfire.dynamics._spec import ModelFile, SimulateSettings, read_model
+
+__all__ = [
+    "READOUTS",
+    "Curvature",
+    "ModelFile",
+    "Params",
+    "PathPrior",
+    "Readout",
+    "Setup",
+    "SimulateSettings",
+    "accumulated_noise",
+    "find_model",
+    "initial_covariance",
+    "make_setup",
+    "parameter_shapes",
+    "path_inputs",
+    "path_prior",
+    "read_model",
+    "shipped_models",
+]
