@@ -11,9 +11,9 @@ from portfire.job._stop import Stop, Stopped, stop_on_signals
 
 def test_one_run_at_a_time_works_in_a_folder(tmp_path):
     again = open_workspace(tmp_path / "out", workers=1, quiet=True)
-    with open_workspace(tmp_path / "out", workers=1, quiet=True):
-        with pytest.raises(PortfireError, match=r"out: another run is working in this folder"):
-            again.__enter__()
+    first = open_workspace(tmp_path / "out", workers=1, quiet=True)
+    with first, pytest.raises(PortfireError, match=r"out: another run is working in this folder"):
+        again.__enter__()
     with open_workspace(tmp_path / "out", workers=1, quiet=True):
         pass
 

@@ -9,7 +9,13 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from portfire.job._atomic import finite, write_dataset_atomic, write_json_atomic, write_table_atomic
+    from portfire.job._atomic import (
+        finite,
+        replacing,
+        write_dataset_atomic,
+        write_json_atomic,
+        write_table_atomic,
+    )
     from portfire.job._file import Job, check_job, read_job
     from portfire.job._result import Result, load_result, summarise
     from portfire.job._run import run
@@ -21,6 +27,7 @@ if TYPE_CHECKING:
 
 _HOME_OF = {
     "finite": "_atomic",
+    "replacing": "_atomic",
     "write_dataset_atomic": "_atomic",
     "write_json_atomic": "_atomic",
     "write_table_atomic": "_atomic",
@@ -59,6 +66,7 @@ __all__ = [
     "open_workspace",
     "read_job",
     "read_trials",
+    "replacing",
     "run",
     "run_tasks",
     "summarise",

@@ -222,8 +222,6 @@ def _from_file(path: Path) -> Job:
 
 
 def _resolve(raw: Mapping[str, Any], base: Path, where: str, source: Path | None) -> Job:
-    from portfire.dynamics._models import find_model
-
     settings = read_settings(raw, where)
     top = settings[""]
     base = base.absolute()
@@ -234,6 +232,8 @@ def _resolve(raw: Mapping[str, Any], base: Path, where: str, source: Path | None
     window = Window(**settings["window"])
     decode = Decode(**settings["decode"])
     _check_cutoffs(window, decode, where)
+    from portfire.dynamics import find_model  # loads what computes, so only when all else is right
+
     try:
         files = tuple(find_model(name, base) for name in settings["model"]["file"])
     except InputError as error:

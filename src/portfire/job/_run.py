@@ -7,7 +7,7 @@ from pathlib import Path
 
 from portfire.job._file import Job, read_job
 from portfire.job._result import Result, load_result
-from portfire.job._workspace import open_workspace
+from portfire.job._workspace import check_out, open_workspace
 
 
 def run(
@@ -45,12 +45,14 @@ def run(
     PortfireError
         If the job failed, or was stopped by Ctrl-C or SIGTERM: the next run resumes.
     """
-    from portfire.job._pipeline import run_job
-
     if not isinstance(job, Job):
         job = read_job(job, out)
     elif out is not None:
         job = replace(job, out=Path(out).absolute())
+    check_out(job.out)
+
+    from portfire.job._pipeline import run_job  # loads what computes, so only when the paths are right
+
     with open_workspace(job.out, workers, quiet) as workspace:
         run_job(job, workspace)
     return load_result(job.out)
