@@ -11,7 +11,8 @@ import pandas as pd
 from portfire.errors import InputError
 from portfire.session._trials import Condition, Trials
 
-# Sums such as 0.1 + 0.2 miss an edge by a few units in the last place; that far, a time counts as on the edge.
+# Sums such as 0.1 + 0.2 miss an edge by a few units in the last place; that far, a time counts as on the
+# edge.
 _EDGE = 1e-9
 _SMALLEST_BIN_S = 1e-4
 _LONGEST_RUN_UP_S = 60.0
@@ -44,8 +45,8 @@ def bin_session(
     kept, units_left_out = _screen_units(units, n_scored, scored_s, min_rate_hz)
     if len(rows) * n_time * len(kept) > _MOST_CELLS:
         raise InputError(
-            f"bin_s = {bin_s:g} gives {len(rows)} trials × {n_time} bins × {len(kept)} units, more than memory holds; "
-            "use longer bins, or set include to 0 for the longest trials."
+            f"bin_s = {bin_s:g} gives {len(rows)} trials × {n_time} bins × {len(kept)} units, more than "
+            "memory holds; use longer bins, or set include to 0 for the longest trials."
         )
     counts = np.zeros((len(rows), n_time, len(kept)), dtype=np.uint16)
     for place, unit in enumerate(kept):
@@ -158,7 +159,8 @@ def screen_trials(trials: pd.DataFrame, bin_s: float) -> tuple[np.ndarray, dict[
             left_out[label] = "no response and no end_s"
         elif lapse[row]:
             left_out[label] = (
-                f"{LAPSE}: {length[row]:.3g} s, more than three times its condition's median of {median[row]:.3g} s"
+                f"{LAPSE}: {length[row]:.3g} s, more than three times its condition's median of "
+                f"{median[row]:.3g} s"
             )
         elif short[row]:
             left_out[label] = f"{length[row]:.3g} s, shorter than one bin of {bin_s:g} s"
@@ -233,8 +235,8 @@ def _screen_units(
     if not kept:
         raise InputError(
             f"no usable unit: none of {len(units)} fires {min_rate_hz:g} spikes/s or more within the trials "
-            f"(the busiest fires {n_scored.max() / scored_s:.2g}); lower min_rate_hz, or check that spikes and trials "
-            "are in seconds on one clock."
+            f"(the busiest fires {n_scored.max() / scored_s:.2g}); lower min_rate_hz, or check that spikes "
+            "and trials are in seconds on one clock."
         )
     return kept, left_out
 

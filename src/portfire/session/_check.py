@@ -116,7 +116,8 @@ def check_trials(table: Table) -> pd.DataFrame:
     usable = include & (trials["response_s"].notna() | trials.get("end_s", trials["response_s"]).notna())
     if not usable.any():
         raise InputError(
-            f"{table.place}: no usable trial; at least one needs include 1 (or no such column) and a response_s or end_s."
+            f"{table.place}: no usable trial; at least one needs include 1 (or no such column) and a "
+            "response_s or end_s."
         )
     for name, cells in table.columns.items():
         if name not in TRIAL_COLUMNS:
@@ -171,7 +172,8 @@ def _check_order(table: Table, trials: pd.DataFrame) -> None:
         table,
         include & (response <= start),
         "response_s",
-        "the response at {response} s is not after the set cue at {start} s; a response comes later than set_s.",
+        "the response at {response} s is not after the set cue at {start} s; a response comes later than "
+        "set_s.",
         response=response,
         start=start,
     )
@@ -210,7 +212,8 @@ def _check_covariates(table: Table, trials: pd.DataFrame) -> None:
                 table,
                 include & trials[name].isna().to_numpy(),
                 name,
-                "the cell is empty, while other trials have one; fill it in, or set include to 0 for this trial.",
+                "the cell is empty, while other trials have one; fill it in, or set include to 0 for this "
+                "trial.",
             )
 
 
@@ -227,10 +230,10 @@ def _check_overlap(table: Table, trials: pd.DataFrame) -> None:
     if clash.any():
         later = int(np.flatnonzero(clash)[0]) + 1
         earlier = int(np.argmax(stop_s[:later]))
+        span = f"{start[earlier]:.9g} to {stop_s[earlier]:.9g} s"
         raise InputError(
-            f"{table.locate(int(rows[later]), 'set_s')}: the set cue at {start[later]:.9g} s falls into the trial of "
-            f"data row {rows[earlier] + 1}, which runs from {start[earlier]:.9g} to {stop_s[earlier]:.9g} s; "
-            "trials must not overlap."
+            f"{table.locate(int(rows[later]), 'set_s')}: the set cue at {start[later]:.9g} s falls into the "
+            f"trial of data row {rows[earlier] + 1}, which runs from {span}; trials must not overlap."
         )
 
 
@@ -251,8 +254,8 @@ def check_clock(
     Raises
     ------
     InputError
-        If spikes and trials hardly overlap, or intervals and rates are both off by a factor that milliseconds or
-        samples would give.
+        If spikes and trials hardly overlap, or intervals and rates are both off by a factor that milliseconds
+        or samples would give.
     """
     used = trials[trials["include"]]
     start = used["set_s"].to_numpy()
@@ -273,14 +276,16 @@ def check_clock(
         elif span > 100 * trial_span:
             suspect = f"; {spike_place} looks like milliseconds or samples"
         raise InputError(
-            f"{spike_place}, column 'time_s', and {trial_place}, column 'set_s': spikes run from {first:.6g} to "
-            f"{last:.6g} and trials from {start.min():.6g} to {stop_s.max():.6g}, so that they hardly overlap{suspect}; "
+            f"{spike_place}, column 'time_s', and {trial_place}, column 'set_s': spikes run from {first:.6g} "
+            f"to {last:.6g} and trials from {start.min():.6g} to {stop_s.max():.6g}, so that they hardly "
+            f"overlap{suspect}; "
             "both must be in seconds on one clock."
         )
     length = float(np.median(stop_s - start))
     rate = max(len(train) for train in spikes) / max(last - first, 1e-9)
     if length > 30 and rate < 0.3:
         raise InputError(
-            f"{trial_place}, column 'response_s': the median trial would last {length:.6g} s and the busiest unit fire "
-            f"{rate:.2g} spikes/s; the clock looks like milliseconds or samples, and must be in seconds."
+            f"{trial_place}, column 'response_s': the median trial would last {length:.6g} s and the busiest "
+            f"unit fire {rate:.2g} spikes/s; the clock looks like milliseconds or samples, and must be in "
+            "seconds."
         )

@@ -132,8 +132,8 @@ def _parse_csv(path: Path, data: bytes, columns: Mapping[str, str] | None, known
                 continue
             if len(row) != len(header):
                 raise InputError(
-                    f"{path}, line {reader.line_num} (data row {len(rows) + 1}): {len(row)} cells where the header "
-                    f"has {len(header)}; give every row one cell a column."
+                    f"{path}, line {reader.line_num} (data row {len(rows) + 1}): {len(row)} cells where the "
+                    f"header has {len(header)}; give every row one cell a column."
                 )
             rows.append(row)
             lines.append(reader.line_num)

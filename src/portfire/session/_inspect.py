@@ -43,13 +43,14 @@ def inspect_session(
     -------
     dict
         Plain values, ready for JSON. `session`: what is in the recording. `use`: what a job would use.
-        `units_left_out`, `trials_left_out`: reason by label. `lapses`: labels of the trials left out as lapses.
-        `rates`: a row a used unit: `rate_hz` within the scored windows (spikes/s), `drift_rho` and `drift_p`, the
-        rank correlation of its rate, less the mean of each condition, with trial time. `drift`: how many units have
-        p below `level`. `behaviour`: per condition and the Weber fraction. `interval_slope`: least-squares slope
-        of produced on sample interval within contexts, with its standard error. `interval_drift`: rank correlation of the log produced interval, less the
-        mean of each condition, with trial time. `confounding`: adjusted R² of context and of sample interval
-        regressed on a smooth of trial time, and whether the two can be told apart. `warnings`: sentences.
+        `units_left_out`, `trials_left_out`: reason by label. `lapses`: labels of the trials left out as
+        lapses. `rates`: a row a used unit: `rate_hz` within the scored windows (spikes/s), `drift_rho` and
+        `drift_p`, the rank correlation of its rate, less the mean of each condition, with trial time.
+        `drift`: how many units have p below `level`. `behaviour`: per condition and the Weber fraction.
+        `interval_slope`: least-squares slope of produced on sample interval within contexts, with its
+        standard error. `interval_drift`: rank correlation of the log produced interval, less the mean of each
+        condition, with trial time. `confounding`: adjusted R² of context and of sample interval regressed on
+        a smooth of trial time, and whether the two can be told apart. `warnings`: sentences.
 
     Raises
     ------
@@ -141,8 +142,8 @@ def measure_unit_drift(trials: Trials) -> tuple[np.ndarray, np.ndarray]:
     Returns
     -------
     rho : ndarray (unit,)
-        Spearman's rank correlation of the rate within the scored window, less its condition's mean, with trial time;
-        NaN where the rate does not vary.
+        Spearman's rank correlation of the rate within the scored window, less its condition's mean, with
+        trial time; NaN where the rate does not vary.
     p : ndarray (unit,)
         Two-sided, as if trials were independent.
     """

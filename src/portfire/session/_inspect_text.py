@@ -131,8 +131,8 @@ def _format_time(found: dict[str, Any]) -> list[str]:
         lines.append("  produced intervals: too few responses to see a drift")
     else:
         lines.append(
-            f"  produced intervals: {100 * interval['last_third_over_first']:+.1f} % from first to last third of "
-            f"trials, rank correlation {interval['rho']:+.2f} (p = {interval['p']:.2g})"
+            f"  produced intervals: {100 * interval['last_third_over_first']:+.1f} % from first to last "
+            f"third of trials, rank correlation {interval['rho']:+.2f} (p = {interval['p']:.2g})"
         )
     return lines
 

@@ -19,9 +19,9 @@ def tabulate_conditions(trials: Trials) -> pd.DataFrame:
     Returns
     -------
     DataFrame
-        One row a condition: `context`, `sample_s` (None where the session has none); `n`, trials with a response;
-        `mean_s`; `sd_s`, with n − 1; `cv`, their ratio; and where targets are given `target_s`, their mean, and
-        `bias_s`, the mean of produced minus target. Numbers that do not exist are NaN.
+        One row a condition: `context`, `sample_s` (None where the session has none); `n`, trials with a
+        response; `mean_s`; `sd_s`, with n − 1; `cv`, their ratio; and where targets are given `target_s`,
+        their mean, and `bias_s`, the mean of produced minus target. Numbers that do not exist are NaN.
     """
     rows = []
     for level, (context, sample) in enumerate(trials.conditions):
@@ -64,15 +64,15 @@ def fit_weber_fraction(
     Returns
     -------
     weber_fraction : float or None
-        Slope of an ordinary least-squares line through the conditions with two responses or more, each with the
-        same weight; None where fewer than two such conditions differ in their mean.
+        Slope of an ordinary least-squares line through the conditions with two responses or more, each with
+        the same weight; None where fewer than two such conditions differ in their mean.
     ci95 : tuple of float or None
         Percentile interval of a bootstrap that draws trials anew within every condition.
 
     References
     ----------
-    Getty 1975, Perception & Psychophysics 18:1, for the generalised form of Weber's law, in which spread grows
-    along a line (from memory).
+    Getty 1975, Perception & Psychophysics 18:1, for the generalised form of Weber's law, in which spread
+    grows along a line (from memory).
     """
     groups = [
         trials.produced_s[(trials.condition == level) & trials.responded]

@@ -10,10 +10,10 @@ from typing import Any
 import numpy as np
 
 from portfire.errors import InputError
-from portfire.session._table import TRIAL_COLUMNS, Table, map_columns, suggest
+from portfire.session._table import LARGEST_TIME_S, TRIAL_COLUMNS, Table, map_columns, parse_labels, suggest
 
 
-def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Table]:
+def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Table, tuple[str, ...]]:
     """Read the spikes and the trials of an NWB file.
 
     Parameters
@@ -21,9 +21,9 @@ def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Tabl
     path : Path
         The file.
     columns : mapping of str to str, optional
-        Interface name to the name in the file, where they differ. `time_s` stands for the ragged column of the
-        units table, `spike_times` where nothing else is said. `stop_time` stands in for `end_s` where the trials
-        table has none.
+        Interface name to the name in the file, where they differ. `time_s` stands for the ragged column of
+        the units table, `spike_times` where nothing else is said. `stop_time` stands in for `end_s` where the
+        trials table has none.
 
     Returns
     -------
@@ -31,6 +31,8 @@ def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Tabl
         One row a spike, as in a spike table.
     trials : Table
         One row a trial.
+    silent : tuple of str
+        Units without a spike.
 
     Raises
     ------
@@ -41,7 +43,8 @@ def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Tabl
         import pynwb
     except ImportError as error:
         raise InputError(
-            f"{path}: reading NWB needs the package pynwb, which is not installed; run pip install 'portfire[nwb]'."
+            f"{path}: reading NWB needs the package pynwb, which is not installed; run pip install "
+            "'portfire[nwb]'."
         ) from error
     # pynwb warns about cached schemas and optional metadata, which say nothing about spikes or trials.
     with warnings.catch_warnings():
@@ -49,7 +52,8 @@ def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Tabl
         try:
             with pynwb.NWBHDF5IO(str(path), "r") as io:
                 content = io.read()
-                return _read_units(path, content.units, columns), _read_trials(path, content.trials, columns)
+                spikes, silent = _read_units(path, content.units, columns)
+                return spikes, _read_trials(path, content.trials, columns), silent
         except InputError:
             raise
         except Exception as error:  # pynwb, hdmf and h5py raise errors of many kinds on a broken file
@@ -57,7 +61,7 @@ def read_nwb(path: Path, columns: Mapping[str, str] | None) -> tuple[Table, Tabl
             raise InputError(f"{path}: this is not a readable NWB 2.x file ({reason}).") from error
 
 
-def _read_units(path: Path, units: Any, columns: Mapping[str, str] | None) -> Table:
+def _read_units(path: Path, units: Any, columns: Mapping[str, str] | None) -> tuple[Table, tuple[str, ...]]:
     place = f"{path}, units table"
     if units is None or len(units) == 0:
         raise InputError(f"{path}: no units table; a units table with spike_times is needed.")
@@ -75,18 +79,35 @@ def _read_units(path: Path, units: Any, columns: Mapping[str, str] | None) -> Ta
     label = (columns or {}).get("unit", "unit" if "unit" in found else None)
     if label is not None and label not in found:
         raise InputError(f"{place}: no column {label!r} to stand for 'unit'{suggest(label, found)}.")
-    labels = np.asarray(units.id[:] if label is None else units[label][:], dtype=object)
-    if len({str(one) for one in labels}) < len(labels):
-        twice = next(str(one) for one in labels if [str(other) for other in labels].count(str(one)) > 1)
-        raise InputError(
-            f"{place}, column {label!r}: unit {twice!r} is there twice; every unit needs its own label."
-        )
+    cells = units.id[:] if label is None else units[label][:]
+    table = Table(place, {"unit": np.asarray(cells, dtype=object)}, {"unit": label or "id"})
+    labels: list[str] = []
+    for row, text in enumerate(parse_labels(table, "unit")):
+        if text is None or text in labels:
+            problem = "the label is empty" if text is None else f"unit {text!r} is there twice"
+            raise InputError(f"{table.locate(row, 'unit')}: {problem}; every unit needs a label of its own.")
+        labels.append(text)
     counts = np.diff(ends, prepend=0)
-    return Table(
-        place,
-        {"unit": np.repeat(labels, counts), "time_s": times[: ends[-1]]},
-        {"unit": label or "id", "time_s": wanted},
-    )
+    unit = np.repeat(np.array(labels, dtype=object), counts)
+    times = _check_times(f"{place}, column {wanted!r}", times[: ends[-1]], unit)
+    silent = tuple(text for text, count in zip(labels, counts, strict=True) if count == 0)
+    return Table(place, {"unit": unit, "time_s": times}, {"unit": label or "id", "time_s": wanted}), silent
+
+
+def _check_times(place: str, times: np.ndarray, unit: np.ndarray) -> np.ndarray:
+    if times.dtype.kind not in "fiu":
+        raise InputError(
+            f"{place}: the spike times are of type {times.dtype}; numbers in seconds are needed."
+        )
+    wrong = np.flatnonzero(~(np.abs(times) <= LARGEST_TIME_S))
+    if len(wrong):
+        first = int(wrong[0])
+        nth = first - int(np.flatnonzero(unit == unit[first])[0]) + 1
+        raise InputError(
+            f"{place}, unit {unit[first]!r}, spike {nth}: {times[first]:g} is no time in seconds; give finite "
+            "seconds on the session clock."
+        )
+    return times
 
 
 def _read_trials(path: Path, trials: Any, columns: Mapping[str, str] | None) -> Table:

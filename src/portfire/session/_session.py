@@ -30,13 +30,14 @@ class Session:
     spikes : tuple of ndarray of float
         Sorted spike times of each unit (s).
     trials : DataFrame
-        One row a trial in the order of the set cues: `trial` (str), `set_s`, `response_s` (NaN: none), `include`
-        (bool), and where given `end_s`, `sample_s`, `context`, `target_s`; further columns are kept and ignored.
+        One row a trial in the order of the set cues: `trial` (str), `set_s`, `response_s` (NaN: none),
+        `include` (bool), and where given `end_s`, `sample_s`, `context`, `target_s`; further columns are kept
+        and ignored.
     source : str
         Where the session came from.
     digest : str
-        `sha256:` and the digest of spikes and trials as used; the same content gives the same digest, whatever
-        the file format, the order of rows, or further columns.
+        `sha256:` and the digest of spikes and trials as used; the same content gives the same digest,
+        whatever the file format, the order of rows, or further columns.
     """
 
     units: tuple[str, ...]
@@ -54,7 +55,8 @@ class Session:
         Parameters
         ----------
         spike_times : mapping of str to array_like
-            Spike times of each unit (s), in any order. A unit without spikes is kept, and left out when binning.
+            Spike times of each unit (s), in any order. A unit without spikes is kept, and left out when
+            binning.
         trials : DataFrame or mapping of str to array_like
             Columns as in a trial table: `set_s`, `response_s` (NaN: no response) and the optional ones.
 
@@ -102,9 +104,9 @@ class Session:
     def bin(self, bin_s: float = 0.02, before_set_s: float = 0.0, min_rate_hz: float = 0.5) -> Trials:
         """Count spikes on bins that start at the set cue.
 
-        Bin k of a trial is [set + k·bin, set + (k+1)·bin). A spike on an edge belongs to the later bin, and the last
-        bin is the last whole one that ends at or before the response (or `end_s`); a time that misses an edge by
-        less than 1e-9 of a bin, as sums of decimal fractions do, is on it.
+        Bin k of a trial is [set + k·bin, set + (k+1)·bin). A spike on an edge belongs to the later bin, and
+        the last bin is the last whole one that ends at or before the response (or `end_s`); a time that
+        misses an edge by less than 1e-9 of a bin, as sums of decimal fractions do, is on it.
 
         Parameters
         ----------
@@ -119,8 +121,8 @@ class Session:
         -------
         Trials
             Used trials in session order. Left out and named are trials with include 0, without response and
-            `end_s`, longer than three times their condition's median produced interval (lapses), and shorter than
-            one bin.
+            `end_s`, longer than three times their condition's median produced interval (lapses), and shorter
+            than one bin.
 
         Raises
         ------
@@ -146,7 +148,8 @@ def _as_train(unit: str, times: Iterable[float]) -> np.ndarray:
     wrong = np.flatnonzero(~np.isfinite(train))
     if len(wrong):
         raise InputError(
-            f"spike_times, unit {unit!r}, row {wrong[0] + 1}: {train[wrong[0]]} is not a finite time; give seconds."
+            f"spike_times, unit {unit!r}, row {wrong[0] + 1}: {train[wrong[0]]} is not a finite time; give "
+            "seconds."
         )
     return train
 

@@ -56,8 +56,8 @@ def explain_by_time(values: Sequence[str] | np.ndarray, time_s: np.ndarray) -> f
     Returns
     -------
     float or None
-        R², adjusted for the degrees of freedom of the smooth and not below 0; None where `values` do not vary or
-        fewer than eight trials are there.
+        R², adjusted for the degrees of freedom of the smooth and not below 0; None where `values` do not vary
+        or fewer than eight trials are there.
     """
     cells = np.asarray(values)
     levels = np.unique(cells)

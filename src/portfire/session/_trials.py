@@ -17,7 +17,8 @@ class Trials:
     Parameters
     ----------
     counts : ndarray of uint16 (trial, time, unit)
-        Spikes a bin. The time axis holds `n_before` run-up bins, then bins from the set cue. Zero outside `mask`.
+        Spikes a bin. The time axis holds `n_before` run-up bins, then bins from the set cue. Zero outside
+        `mask`.
     mask : ndarray of bool (trial, time)
         True where the bin is whole and ends at or before the response (or `end_s`); run-up bins are True.
     n_before : int

@@ -38,7 +38,7 @@ def collect_warnings(found: dict[str, Any], session: Session, trials: Trials) ->
 def _warn_of_size(found: dict[str, Any], session: Session, trials: Trials) -> Iterator[str]:
     use, n_trials = found["use"], len(session.trials)
     if use["with_response"] == 0:
-        yield "No used trial has a response: nothing can be said about produced intervals, and nothing decoded."
+        yield "No used trial has a response: nothing can be said of produced intervals, and nothing decoded."
     elif use["with_response"] < len(trials):
         yield (
             f"{len(trials) - use['with_response']} of {len(trials)} used trials have no response; "
@@ -65,8 +65,8 @@ def _warn_of_conditions(found: dict[str, Any], trials: Trials) -> Iterator[str]:
     if trials.sample_s is not None and len(trials.conditions) > len(trials) / 5:
         n_values = len({sample for _, sample in trials.conditions})
         yield (
-            f"sample_s has {n_values} different values over {len(trials)} trials, so that few conditions repeat; "
-            "give the nominal interval rather than the measured one."
+            f"sample_s has {n_values} different values over {len(trials)} trials, so that few conditions "
+            "repeat; give the nominal interval rather than the measured one."
         )
     elif few:
         yield f"{few} of {len(trials.conditions)} conditions have fewer than {_FEW_TRIALS} trials."
@@ -75,17 +75,19 @@ def _warn_of_conditions(found: dict[str, Any], trials: Trials) -> Iterator[str]:
         alike.setdefault(label.casefold(), []).append(label)
     for labels in alike.values():
         if len(labels) > 1:
-            yield f"Contexts {' and '.join(map(repr, labels))} differ only in upper and lower case; are they one?"
+            named = " and ".join(map(repr, labels))
+            yield f"Contexts {named} differ only in upper and lower case; are they one?"
     if found["confounding"]["separable"] is False:
         yield (
-            "Context and sample interval go together on every trial, so that their pushes cannot be told apart; "
-            "leave one of the two sources out."
+            "Context and sample interval go together on every trial, so that their pushes cannot be told "
+            "apart; leave one of the two sources out."
         )
     if trials.sample_s is not None and trials.responded.any():
         ratio = float(np.median(trials.sample_s) / np.nanmedian(trials.produced_s))
         if not 0.01 < ratio < 100:
             yield (
-                f"The median sample interval is {ratio:.3g} times the median produced interval; is sample_s in seconds?"
+                f"The median sample interval is {ratio:.3g} times the median produced interval; is sample_s "
+                "in seconds?"
             )
     slope = found["interval_slope"]
     if slope is not None and slope["slope"] < -3 * slope["se"]:
@@ -97,25 +99,28 @@ def _warn_of_conditions(found: dict[str, Any], trials: Trials) -> Iterator[str]:
 
 def _warn_of_time(found: dict[str, Any]) -> Iterator[str]:
     drift, n_units = found["drift"], found["use"]["units_used"]
-    if drift["n_units"] >= 2 and drift["share"] > 0.1 or drift["share"] > 0.5:
+    if (drift["n_units"] >= 2 and drift["share"] > 0.1) or drift["share"] > 0.5:
         yield (
             f"{drift['n_units']} of {n_units} units change their rate over the session "
             f"(rank correlation with trial time, p < {drift['level']:g}); keep the slow drift in the model."
         )
-    for name, word in (("context_r2", "the context"), ("sample_r2", "the sample interval")):
-        share = found["confounding"][name]
-        if share is not None and share > CONFOUNDED_R2:
-            yield (
-                f"Trial time predicts {word} (R² = {share:.2f}): what it does cannot be told from slow drift, "
-                "and its verdict will be undetermined."
-                if name == "context_r2"
-                else f"Trial time predicts {word} (R² = {share:.2f}): what it does is hard to tell from slow drift."
-            )
+    share = found["confounding"]["context_r2"]
+    if share is not None and share > CONFOUNDED_R2:
+        yield (
+            f"Trial time predicts the context (R² = {share:.2f}): what the context does cannot be told from "
+            "slow drift, and its verdict will be undetermined."
+        )
+    share = found["confounding"]["sample_r2"]
+    if share is not None and share > CONFOUNDED_R2:
+        yield (
+            f"Trial time predicts the sample interval (R² = {share:.2f}): what the interval does is hard to "
+            "tell from slow drift."
+        )
     interval = found["interval_drift"]
     if interval is not None and interval["p"] is not None and interval["p"] < drift["level"]:
         yield (
-            f"Produced intervals drift over the session: {100 * interval['last_third_over_first']:+.0f} % from the "
-            f"first to the last third of trials (p = {interval['p']:.2g})."
+            f"Produced intervals drift over the session: {100 * interval['last_third_over_first']:+.0f} % "
+            f"from the first to the last third of trials (p = {interval['p']:.2g})."
         )
 
 
@@ -129,7 +134,7 @@ def _warn_of_spikes(session: Session, trials: Trials) -> Iterator[str]:
     start = trials.set_s - trials.n_before * trials.bin_s
     reach = int(np.sum(start[1:] < stop[:-1]))
     if reach:
-        yield f"The run-up of {reach} trials reaches back into the trial before; a shorter run-up keeps them apart."
+        yield f"The run-up of {reach} trials reaches into the trial before; a shorter one keeps them apart."
     first = min(float(train[0]) for train in session.spikes if len(train))
     if trials.n_before and start[0] < first:
         early = int(np.sum(start < first))
@@ -142,6 +147,6 @@ def _warn_of_spikes(session: Session, trials: Trials) -> Iterator[str]:
     if twice:
         shown = ", ".join(twice[:8]) + (", …" if len(twice) > 8 else "")
         yield (
-            f"More than one in a hundred spikes of {len(twice)} units ({shown}) has the same time as the one before; "
-            "are spikes listed twice, or times rounded?"
+            f"More than one in a hundred spikes of {len(twice)} units ({shown}) has the same time as the one "
+            "before; are spikes listed twice, or times rounded?"
         )

@@ -17,8 +17,8 @@ class Behaviour:
     Parameters
     ----------
     conditions : DataFrame
-        One row a condition: `context`, `sample_s` (s), `n`, `mean_s`, `sd_s`, `cv`, and where targets are given
-        `target_s` and `bias_s`, the mean of produced minus target (s).
+        One row a condition: `context`, `sample_s` (s), `n`, `mean_s`, `sd_s`, `cv`, and where targets are
+        given `target_s` and `bias_s`, the mean of produced minus target (s).
     weber_fraction : float or None
         Slope of within-condition standard deviation on mean.
     weber_ci95 : tuple of float or None
@@ -58,10 +58,11 @@ def summarise_behaviour(trials: Trials, draws: int = 1000, seed: int = 0) -> Beh
     Returns
     -------
     Behaviour
-        Per condition n, mean, standard deviation (n − 1), coefficient of variation, and bias against the target
-        where given; and the Weber fraction, the slope of an ordinary least-squares line of within-condition
-        standard deviation on mean over the conditions with two responses or more, with a percentile interval from
-        drawing trials anew within conditions. It is None where fewer than two such conditions are there.
+        Per condition n, mean, standard deviation (n − 1), coefficient of variation, and bias against the
+        target where given; and the Weber fraction, the slope of an ordinary least-squares line of
+        within-condition standard deviation on mean over the conditions with two responses or more, with a
+        percentile interval from drawing trials anew within conditions. It is None where fewer than two such
+        conditions are there.
     """
     weber_fraction, interval = fit_weber_fraction(trials, draws, seed)
     return Behaviour(tabulate_conditions(trials), weber_fraction, interval)
