@@ -104,8 +104,8 @@ def _check_times(place: str, times: np.ndarray, unit: np.ndarray) -> np.ndarray:
         first = int(wrong[0])
         nth = first - int(np.flatnonzero(unit == unit[first])[0]) + 1
         raise InputError(
-            f"{place}, unit {unit[first]!r}, spike {nth}: {times[first]:g} is no time in seconds; give finite "
-            "seconds on the session clock."
+            f"{place}, unit {unit[first]!r}, spike {nth}: {times[first]:g} is no time in seconds; give "
+            "finite seconds on the session clock."
         )
     return times
 
