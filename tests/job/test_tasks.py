@@ -89,6 +89,12 @@ def test_a_damaged_entry_is_redone_with_a_warning(run, make_task, store, tmp_pat
     )
 
 
+def test_progress_counts_from_the_first_line_what_there_is_to_do(run, make_task):
+    stream = StringIO()
+    run(*[make_task(name, value=1) for name in "abc"], stream=stream)
+    assert stream.getvalue().startswith("toys: 1/3 fits")
+
+
 def test_later_stages_may_build_on_earlier_ones(run, make_task):
     run(make_task("a", value=1))
     assert run(make_task("b", deps=("a",), value=2))[task_key(name="b")]["value"] == 3

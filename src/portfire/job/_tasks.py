@@ -98,6 +98,7 @@ def run_tasks(
     intact = {key for key in by_key if _is_intact(store, key, progress)}
     for task in by_key.values():
         progress.expect(task.stage, task.key)
+    for task in by_key.values():
         if task.key in intact:
             progress.finish(task.stage, task.key, task.name, reused=True)
     left = [task for task in by_key.values() if task.key not in intact]
