@@ -91,7 +91,9 @@ def test_a_damaged_entry_is_redone_with_a_warning(run, make_task, store, tmp_pat
 
 def test_progress_counts_from_the_first_line_what_there_is_to_do(run, make_task):
     stream = StringIO()
-    run(*[make_task(name, value=1) for name in "abc"], stream=stream)
+    tasks = [make_task(name, value=1) for name in "abc"]
+    run(*tasks)
+    run(*tasks, stream=stream)
     assert stream.getvalue().startswith("toys: 1/3 fits")
 
 
