@@ -1,0 +1,111 @@
+"""The page: words, figures and tables in one HTML file."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from importlib.resources import files
+from typing import Any
+
+from jinja2 import Environment, StrictUndefined
+from markupsafe import Markup
+
+from portfire.report import _tables, _words
+from portfire.report._accounts import describe_levels
+from portfire.report._folder import RunFolder
+from portfire.report._rates import state_rates
+from portfire.report._style import Absent, Drawn, clean
+
+
+def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
+    """Return the page as HTML; all text from data is escaped."""
+    here = files("portfire.report")
+    environment = Environment(
+        autoescape=True, undefined=StrictUndefined, finalize=_finalize, trim_blocks=True, lstrip_blocks=True
+    )
+    template = environment.from_string(here.joinpath("page.html").read_text(encoding="utf-8"))
+    session, chosen = run.part("session"), run.part("chosen")
+    return template.render(
+        style=Markup(here.joinpath("page.css").read_text(encoding="utf-8")),
+        title=_title(run),
+        facts=_list_facts(run),
+        verdicts=[_card(c, run, session.get("trials_used")) for c in run.rows("contrasts")],
+        untested=_words.explain_untested(run),
+        decode_sentence=_words.state_decode(run),
+        rates_sentence=state_rates(run),
+        levels=describe_levels(run),
+        figures={key: _as_dict(figure) for key, figure in figures.items()},
+        tables={
+            "contrasts": _tables.list_contrasts(run),
+            "accounts": _tables.list_accounts(run),
+            "behaviour": _tables.list_behaviour(run),
+            "relations": _tables.list_relations(run),
+            "decode": _tables.list_decode(run),
+            "left_out": _tables.list_left_out(run),
+            "settings": _tables.list_settings(run),
+        },
+        weber=_state_weber(run),
+        chosen=chosen,
+        warnings=[str(w) for w in run.result.get("warnings") or []],
+        not_run=[str(s) for s in run.result.get("not_run") or []],
+        version=run.result.get("portfire"),
+    )
+
+
+def _finalize(value: Any) -> Any:
+    if isinstance(value, Markup):
+        return value
+    return "not given" if value is None else clean(value)
+
+
+def _title(run: RunFolder) -> str:
+    return run.path.resolve().name or "run"
+
+
+def _as_dict(figure: Drawn | Absent) -> dict[str, Any]:
+    if isinstance(figure, Drawn):
+        return {"title": figure.title, "svg": Markup(figure.svg), "caption": figure.caption, "absent": None}
+    return {"title": figure.title, "svg": None, "caption": None, "absent": figure.reason}
+
+
+def _list_facts(run: RunFolder) -> list[tuple[str, str]]:
+    session, chosen = run.part("session"), run.part("chosen")
+    facts = [
+        ("trials used", session.get("trials_used")),
+        ("units used", session.get("units_used")),
+        ("conditions", session.get("conditions")),
+        ("model", chosen.get("model")),
+        ("latent dimensions", chosen.get("latent_dim")),
+        ("seed", run.result.get("seed")),
+    ]
+    return [(name, _tables.write_plain(value)) for name, value in facts]
+
+
+def _card(contrast: Mapping[str, Any], run: RunFolder, n_used: int | None) -> dict[str, Any]:
+    return {
+        "source": contrast.get("source"),
+        "verdict": contrast.get("verdict"),
+        "sentence": _words.state_verdict(contrast, run.min_gain),
+        "notes": [
+            note
+            for note in (
+                _words.state_open(contrast, n_used),
+                _words.state_evidence(contrast),
+                contrast.get("mimic"),
+                _words.state_dims(contrast),
+            )
+            if note
+        ],
+    }
+
+
+def _state_weber(run: RunFolder) -> str:
+    behaviour = run.part("behaviour")
+    fraction = behaviour.get("weber_fraction")
+    if fraction is None:
+        return "The Weber fraction is not given: it needs conditions that differ in mean produced interval."
+    bounds = behaviour.get("weber_ci95")
+    interval = f" (95 % CI {_words.write_interval(bounds, 3)})" if bounds else ""
+    return (
+        f"Weber fraction {_words.write_number(fraction, 3)}{interval}: the slope of the within-condition SD "
+        "on the mean produced interval."
+    )

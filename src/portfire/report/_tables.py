@@ -1,0 +1,245 @@
+"""Tables of the page: rows of text, with every column explained."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+from portfire.report._accounts import compare_scores, shorten_account, tabulate_contrasts
+from portfire.report._folder import RunFolder
+from portfire.report._pushes import relate_within
+from portfire.report._words import MINUS, write_interval, write_number, write_p_value, write_short
+
+N_OPEN = 30
+
+
+@dataclass(frozen=True)
+class Table:
+    """A table: columns with their explanations, rows of text; `n_words` first columns hold words."""
+
+    caption: str
+    columns: tuple[tuple[str, str], ...]
+    rows: list[list[str]]
+    n_words: int = 1
+    folded: bool = field(default=False)
+
+
+def list_accounts(run: RunFolder) -> Table | None:
+    """Return the accounts with their held-out scores."""
+    if not run.rows("accounts"):
+        return None
+    compared = compare_scores(run)
+    differences = {} if compared is None else {(r.model, r.account): r for r in compared.itertuples()}
+    rows = []
+    for entry in run.rows("accounts"):
+        paired = differences.get((str(entry.get("model")), str(entry.get("account"))))
+        if paired is None:
+            difference = "not given"
+        elif paired.is_reference:
+            difference = "0"
+        else:
+            difference = f"{write_number(paired.difference)} ± {write_number(paired.se)}"
+        rows.append(
+            [
+                shorten_account(entry.get("account", "")),
+                str(entry.get("model")),
+                str(entry.get("latent_dim")),
+                write_number(entry.get("loglik_per_trial")),
+                write_number(entry.get("loglik_se"), 3),
+                difference,
+                write_number(entry.get("bits_per_spike"), 3),
+                str(entry.get("n_trials")),
+            ]
+        )
+    return Table(
+        "Accounts, scored on held-out trials",
+        (
+            ("account", "the route of every source: none, initial, sustained or both"),
+            ("model", "the model file that was fitted"),
+            ("D", "number of latent dimensions"),
+            ("log-likelihood", "log marginal likelihood of all counts, mean over held-out trials, nats"),
+            ("MC SE", "Monte-Carlo standard error of that mean, nats a trial"),
+            ("difference", "to the full account, paired over trials, ± its standard error, nats a trial"),
+            ("bits/spike", "gain over a constant rate for each unit, bits a spike"),
+            ("trials", "number of held-out trials scored"),
+        ),
+        rows,
+        n_words=2,
+    )  # fmt: skip
+
+
+def list_contrasts(run: RunFolder) -> Table | None:
+    """Return the entries of the contrasts."""
+    rows = tabulate_contrasts(run)
+    if not rows:
+        return None
+    return Table(
+        "Contrasts",
+        (
+            ("source", "what differs between trials"),
+            ("taken away", "the route that the smaller account lacks; the other sources keep both routes"),
+            ("gain", "held-out difference, corrected for the number of parameters, nats a trial"),
+            ("95 % interval", "of the gain, over trials, nats a trial"),
+            ("likelihood ratio", "of the two accounts on all trials, with its degrees of freedom"),
+            ("p", "of that ratio, adjusted over all rows of this table (Holm)"),
+        ),
+        rows,
+        n_words=2,
+    )
+
+
+def list_decode(run: RunFolder) -> Table | None:
+    """Return the decode rows."""
+    rows = [
+        [
+            str(r.get("features")),
+            str(r.get("variant", "all")),
+            write_short(r.get("cutoff_s")),
+            *(write_plain(r.get(key)) for key in ("running", "n_used", "n_trials")),
+            write_number(r.get("r2_within_condition"), 3),
+            write_interval(r.get("ci95"), 3),
+            write_interval(r.get("null95"), 3),
+            write_p_value(r.get("p")),
+            "not given" if r.get("null_draws") is None else str(r["null_draws"]),
+        ]
+        for r in run.rows("decode")
+    ]
+    if not rows:
+        return None
+    return Table(
+        "Prediction of the produced interval",
+        (
+            ("features", "a push, both, the state at the cutoff, or one raw count a unit (the yardstick)"),
+            ("trials", "all: still running at the cutoff; late: respond 0.15 s or more after it"),
+            ("cutoff", "spikes up to this time after the set cue are used, s"),
+            ("running", "trials with a response that still run at the cutoff"),
+            ("left", "of these, the late ones where the row is late"),
+            ("scored", "of these, trials of a condition that training can standardise"),
+            ("R²", "of the standardised log interval within conditions, on held-out trials"),
+            ("95 % interval", "of R², bootstrap over blocks of trials"),
+            ("null, 95 %", "middle 95 % of R² under linear shifts of the responses against the recording"),
+            ("p", "one-sided, (1 + draws at least as large) / (1 + draws); not adjusted over rows"),
+            ("draws", "number of distinct shifts"),
+        ),
+        rows,
+        n_words=2,
+        folded=len(rows) > N_OPEN,
+    )  # fmt: skip
+
+
+_BEHAVIOUR = (
+    ("context", "context", "the rule in force", None),
+    ("sample_s", "sample", "sample interval, s", "short"),
+    ("n", "trials", "number of trials with a response", "count"),
+    ("mean_s", "mean", "mean produced interval, s", "number"),
+    ("sd_s", "SD", "standard deviation of the produced interval, s", "number"),
+    ("target_s", "target", "the interval asked for, s", "number"),
+    ("bias_s", "bias", "mean produced interval less the target, s", "number"),
+    ("cv", "CV", "coefficient of variation, SD over mean", "number"),
+)
+
+
+def list_behaviour(run: RunFolder) -> Table | None:
+    """Return mean and SD of the produced interval by condition."""
+    conditions = [c for c in run.part("behaviour").get("conditions") or [] if isinstance(c, Mapping)]
+    if not conditions:
+        return None
+    used = [column for column in _BEHAVIOUR if any(c.get(column[0]) is not None for c in conditions)]
+    write = {
+        "short": write_short,
+        "number": lambda v: write_number(v, 3),
+        "count": lambda v: "0" if v is None else str(v),
+        None: lambda v: "none" if v is None else str(v),
+    }
+    rows = [[write[kind](c.get(key)) for key, _, _, kind in used] for c in conditions]
+    return Table(
+        "Produced intervals by condition",
+        tuple((head, meaning) for _, head, meaning, _ in used),
+        rows,
+        n_words=int(used[0][0] == "context"),
+        folded=len(rows) > N_OPEN,
+    )
+
+
+def list_relations(run: RunFolder) -> Table | None:
+    """Return the within-condition correlation of each push with the produced interval, for all latents."""
+    within = relate_within(run)
+    if within is None:
+        return None
+    latents = within.index.get_level_values("latent").unique()
+    rows = [
+        [push, *(write_number(within.loc[(push, k), "r"]) for k in latents), str(within["n"].iloc[0])]
+        for push in ("initial", "sustained")
+    ]
+    return Table(
+        "Correlation of each push with the produced interval, within conditions",
+        (
+            ("push", "initial or sustained"),
+            *((f"latent {k}", "correlation over single trials" if k == latents[0] else "") for k in latents),
+            ("trials", "number of trials with a response"),
+        ),
+        rows,
+    )
+
+
+def list_left_out(run: RunFolder) -> Table | None:
+    """Return the units and trials that were left out, with the reason."""
+    rows = []
+    for kind in ("unit", "trial"):
+        left_out = run.part("session").get(f"{kind}s_left_out")
+        if isinstance(left_out, Mapping):
+            rows += [[kind, str(label), str(reason)] for label, reason in left_out.items()]
+    if not rows:
+        return None
+    return Table(
+        "Units and trials left out",
+        (("what", "unit or trial"), ("label", "as in the session"), ("reason", "why it was left out")),
+        rows,
+        n_words=3,
+        folded=len(rows) > N_OPEN,
+    )
+
+
+def list_settings(run: RunFolder) -> Table:
+    """Return settings, versions and seed."""
+    rows = [["seed", write_plain(run.result.get("seed"))]]
+    rows += flatten("", run.part("settings"))
+    rows += flatten("chosen", run.part("chosen"))
+    rows.append(["version of portfire", write_plain(run.result.get("portfire"))])
+    rows += [
+        [f"version of {name}", write_plain(v)]
+        for name, v in run.part("versions").items()
+        if name != "portfire"
+    ]
+    rows.append(["digest of the session", write_plain(run.part("session").get("digest"))])
+    for key in ("carrying_mode",):
+        if key in run.result:
+            rows += flatten(key, run.result[key])
+    columns = (("setting", "as in the job file, section and key"), ("value", "a number, a word or a list"))
+    return Table("As the run resolved them", columns, rows, n_words=2)
+
+
+def flatten(prefix: str, value: Any) -> list[list[str]]:
+    """Return nested settings as rows of dotted key and value."""
+    if isinstance(value, Mapping) and value:
+        return [
+            row
+            for key, inner in value.items()
+            for row in flatten(f"{prefix}.{key}" if prefix else str(key), inner)
+        ]
+    return [[prefix, write_plain(value)]]
+
+
+def write_plain(value: Any) -> str:
+    """Return a setting as text."""
+    if value is None:
+        return "not given"
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, int | float):
+        return f"{value:.10g}".replace("-", MINUS) if isinstance(value, float) else str(value)
+    if isinstance(value, list) and all(isinstance(v, str | int | float) for v in value):
+        return ", ".join(write_plain(v) for v in value) or "none"
+    return value if isinstance(value, str) else json.dumps(value, ensure_ascii=False)
