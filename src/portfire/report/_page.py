@@ -7,7 +7,6 @@ from importlib.resources import files
 from typing import Any
 
 from jinja2 import Environment, StrictUndefined
-from markupsafe import Markup
 
 from portfire.report import _tables, _words
 from portfire.report._accounts import describe_levels
@@ -25,7 +24,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
     template = environment.from_string(here.joinpath("page.html").read_text(encoding="utf-8"))
     session, chosen = run.part("session"), run.part("chosen")
     return template.render(
-        style=Markup(here.joinpath("page.css").read_text(encoding="utf-8")),
+        style=here.joinpath("page.css").read_text(encoding="utf-8"),
         title=_title(run),
         facts=_list_facts(run),
         verdicts=[_card(c, run, session.get("trials_used")) for c in run.rows("contrasts")],
@@ -52,7 +51,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
 
 
 def _finalize(value: Any) -> Any:
-    if isinstance(value, Markup):
+    if hasattr(value, "__html__"):  # our own style, SVG or markup, already safe
         return value
     return "not given" if value is None else clean(value)
 
@@ -63,7 +62,7 @@ def _title(run: RunFolder) -> str:
 
 def _as_dict(figure: Drawn | Absent) -> dict[str, Any]:
     if isinstance(figure, Drawn):
-        return {"title": figure.title, "svg": Markup(figure.svg), "caption": figure.caption, "absent": None}
+        return {"title": figure.title, "svg": figure.svg, "caption": figure.caption, "absent": None}
     return {"title": figure.title, "svg": None, "caption": None, "absent": figure.reason}
 
 

@@ -193,7 +193,11 @@ def draw_rates_overall(run: RunFolder) -> Drawn | Absent:
     left.set_xlim(0, top)
     left.set_ylim(0, top)
     bar = figure.colorbar(
-        cells, ax=left, label="number of bins", ticks=LogLocator(10), format=FuncFormatter(_plain_tick)
+        cells,
+        ax=left,
+        label="number of bins",
+        ticks=LogLocator(10, subs=(1, 2, 5)),
+        format=FuncFormatter(_plain_tick),
     )
     bar.ax.yaxis.set_minor_formatter(NullFormatter())
     ordered = check.by_unit[check.worst]
@@ -206,6 +210,7 @@ def draw_rates_overall(run: RunFolder) -> Drawn | Absent:
         linewidth=1,
     )
     right.set_xlabel("units, by misfit (rank)")
+    right.xaxis.set_major_locator(MaxNLocator(5, integer=True))
     if check.excess is not None:
         right.axhline(1, color=INK, linestyle=(0, (4, 3)), linewidth=1)
         right.set_ylabel("squared difference\n(times counting noise)")
