@@ -46,7 +46,7 @@ def draw_behaviour(run: RunFolder) -> Drawn | Absent:
         _draw_group(axes, rows, looks[group], places, shift, gap * 0.62 * 0.36 / len(groups), group)
     if by_sample:
         axes.set_xlabel("sample interval (s)")
-        axes.set_xticks(list(places.values()), [f"{s:g}" for s in places])
+        axes.set_xticks(list(places.values()), [f"{s:.3g}" for s in places])
     else:
         axes.set_xlabel("context" if run.contexts else "")
         axes.set_xticks(range(len(groups)), [shorten(g, 16) for g in groups])
@@ -130,8 +130,8 @@ def _describe(table: pd.DataFrame, groups: list[str], by_sample: bool) -> str:
         if len(means) > 1:
             first, last = means.index[0], means.index[-1]
             parts.append(
-                f"{name}: {write_number(means.iloc[0])} s at a sample interval of {first:g} s to "
-                f"{write_number(means.iloc[-1])} s at {last:g} s"
+                f"{name}: {write_number(means.iloc[0])} s at a sample interval of {first:.3g} s to "
+                f"{write_number(means.iloc[-1])} s at {last:.3g} s"
             )
         elif len(means) == 1:
             parts.append(f"{name}: {write_number(means.iloc[0])} s")
