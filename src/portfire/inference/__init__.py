@@ -3,13 +3,15 @@
 from portfire.inference import _configure
 from portfire.inference._chain import Factor, factorise, invert_band, substitute_backward, substitute_forward
 from portfire.inference._chunk import Chunk, Packed, pack
+from portfire.inference._importance import Sampled, correction_size, draw_deviations, importance, lane_keys
 from portfire.inference._smoother import (
+    Moments,
     Path,
     Posterior,
-    find_mode,
     laplace,
     laplace_gradient,
     newton_sweep,
+    posterior_moments,
     start_path,
 )
 
@@ -18,16 +20,22 @@ _configure.configure()
 __all__ = [
     "Chunk",
     "Factor",
+    "Moments",
     "Packed",
     "Path",
     "Posterior",
+    "Sampled",
+    "correction_size",
+    "draw_deviations",
     "factorise",
-    "find_mode",
+    "importance",
     "invert_band",
+    "lane_keys",
     "laplace",
     "laplace_gradient",
     "newton_sweep",
     "pack",
+    "posterior_moments",
     "start_path",
     "substitute_backward",
     "substitute_forward",

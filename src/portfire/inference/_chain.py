@@ -75,11 +75,11 @@ def solve_upper(columns: list[jax.Array], inverse: list[jax.Array], right: jax.A
     """L⁻ᵀ R, R of shape (D, k, lane)."""
     d = len(columns)
     rows: list[jax.Array] = [right[0]] * d
+    lower = jnp.stack(columns, axis=1)
     for j in reversed(range(d)):
-        row = right[j]
-        for k in range(j + 1, d):
-            row = row - columns[j][k] * rows[k]
-        rows[j] = row * inverse[j]
+        rows[j] = right[j] * inverse[j]
+        if j:
+            right = right - lower[j][:, None] * rows[j][None]
     return jnp.stack(rows)
 
 
@@ -145,34 +145,27 @@ def substitute_backward(factor: Factor, forward: jax.Array) -> jax.Array:
     return lax.scan(step, jnp.zeros_like(forward[0]), (*factor, forward), reverse=True)[1]
 
 
-def invert_band(factor: Factor, forward: jax.Array) -> tuple[jax.Array, jax.Array, jax.Array]:
-    """Backward substitution together with the band of the inverse.
+def invert_band(factor: Factor) -> tuple[jax.Array, jax.Array]:
+    """The band of the inverse, by recursion backwards in time (Rauch, Tung and Striebel 1965).
 
     Returns
     -------
-    solution : array, shape (time, D, k, lane)
     covariance : array, shape (time, D, D, lane)
         Diagonal blocks of the inverse.
     lag_one : array, shape (time, D, D, lane)
         Block (t, t+1) of the inverse; the last is zero.
     """
-    d = factor.lower.shape[1]
-    n_lanes = factor.lower.shape[-1]
+    _, d, _, n_lanes = factor.lower.shape
     identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
 
-    def step(carry: tuple[jax.Array, jax.Array], block: tuple[jax.Array, ...]) -> tuple:
-        later, cov_later = carry
-        lower, inverse, coupling, r = block
+    def step(later: jax.Array, block: tuple[jax.Array, ...]) -> tuple[jax.Array, tuple[jax.Array, jax.Array]]:
+        lower, inverse, coupling = block
         columns, roots = _unstack(lower, inverse)
         half = solve_lower(columns, roots, identity)
-        stacked = jnp.concatenate([r - multiply(coupling, later), coupling], axis=1)
-        solved = solve_upper(columns, roots, stacked)
-        gain = solved[:, r.shape[1] :]
-        lag = -multiply(gain, cov_later)
+        gain = multiply_transposed(half, coupling)
+        lag = -multiply(gain, later)
         cov = multiply_transposed(half, half) - multiply(lag, gain.transpose(1, 0, 2))
         cov = 0.5 * (cov + cov.transpose(1, 0, 2))
-        solution = solved[:, : r.shape[1]]
-        return (solution, cov), (solution, cov, lag)
+        return cov, (cov, lag)
 
-    start = (jnp.zeros_like(forward[0]), jnp.zeros((d, d, n_lanes)))
-    return lax.scan(step, start, (*factor, forward), reverse=True)[1]
+    return lax.scan(step, jnp.zeros((d, d, n_lanes)), tuple(factor), reverse=True)[1]

@@ -14,7 +14,7 @@ from portfire.dynamics import READOUTS, Setup
 from portfire.session import Trials
 
 _LANES = (16, 32, 64, 128)
-_LENGTHS = np.unique(np.round(8 * 1.25 ** np.arange(0, 30)).astype(int))
+_LENGTH_SHARES = (0.7, 1.0)
 
 
 class Chunk(NamedTuple):
@@ -81,7 +81,7 @@ class Packed:
         return out
 
 
-def _round_up(value: int, grid: np.ndarray | tuple[int, ...]) -> int:
+def _round_up(value: int, grid: tuple[int, ...]) -> int:
     larger = [int(g) for g in grid if g >= value]
     return larger[0] if larger else int(value)
 
@@ -101,9 +101,12 @@ def pack(trials: Trials, setup: Setup, mask: np.ndarray | None = None) -> Packed
     ends = np.where(mask.any(axis=1), mask.shape[1] - np.argmax(mask[:, ::-1], axis=1), 1)
     order = np.argsort(ends, kind="stable")
     lanes = _round_up(min(len(trials), _LANES[-1]), _LANES)
+    # Lengths hang on the session's longest trial, so that parts of a session share compiled code.
+    longest = trials.counts.shape[1] - setup.n_before
+    lengths = tuple(max(2, int(np.ceil(share * longest))) for share in _LENGTH_SHARES)
     chunks, members = [], []
     for part in _cut(order, lanes):
-        n_time = setup.n_before + _round_up(max(2, int(ends[part].max()) - setup.n_before), _LENGTHS)
+        n_time = setup.n_before + _round_up(max(2, int(ends[part].max()) - setup.n_before), lengths)
         chunks.append(_fill(trials, setup, mask, design, part, lanes, n_time))
         members.append(part)
     return Packed(tuple(chunks), tuple(members), len(trials), trials.counts.shape[1])

@@ -28,7 +28,7 @@ from portfire.inference._chain import (
 )
 from portfire.inference._chunk import Chunk
 
-DECREMENT_TOLERANCE = 1e-3
+DECREMENT_TOLERANCE = 1e-5
 MAX_SWEEPS = 60
 
 
@@ -37,6 +37,13 @@ class Path(NamedTuple):
 
     x: jax.Array
     e: jax.Array
+
+
+class Corner(NamedTuple):
+    """Cholesky factor of small matrices: L (D, D, lane) and one over its diagonal (D, lane)."""
+
+    lower: jax.Array
+    inverse_diagonal: jax.Array
 
 
 class Posterior(NamedTuple):
@@ -48,22 +55,49 @@ class Posterior(NamedTuple):
     value : array, shape (lane,)
         Laplace log marginal likelihood (nats).
     sweeps : array, shape ()
-        Newton sweeps spent; `converged` (lane,) tells whether they sufficed.
-    covariance, lag_one : arrays, shape (time, D, D, lane)
-        Of x at t, and between t and t+1; border uncertainty included.
-    cross : array, shape (time, D, D, lane)
-        Covariance of x_t with e.
-    border_covariance : array, shape (D, D, lane)
+        Newton sweeps spent.
+    converged : array of bool, shape (lane,)
+        Whether they sufficed.
+    slack : Path
+        Gradient of the log posterior at ``mode`` (zero at the exact mode).
+    left : array, shape (lane,)
+        What ``value`` holds for the last, untaken step (nats).
+    factor : Factor
+        Cholesky factor of the chain's Hessian.
+    border_solution : array, shape (time, D, D, lane)
+        V = Hxx⁻¹ Hxe.
+    corner : Corner
+        Cholesky factor of the border's Schur complement.
     """
 
     mode: Path
     value: jax.Array
     sweeps: jax.Array
     converged: jax.Array
+    slack: Path
+    left: jax.Array
+    factor: Factor
+    border_solution: jax.Array
+    corner: Corner
+
+
+class Moments(NamedTuple):
+    """Covariances of the Laplace posterior, border uncertainty included.
+
+    Attributes
+    ----------
+    covariance, lag_one : arrays, shape (time, D, D, lane)
+        Of x at t, and between t and t+1.
+    cross : array, shape (time, D, D, lane)
+        Covariance of x_t with e.
+    border : array, shape (D, D, lane)
+        Covariance of e.
+    """
+
     covariance: jax.Array
     lag_one: jax.Array
     cross: jax.Array
-    border_covariance: jax.Array
+    border: jax.Array
 
 
 class _Data(NamedTuple):
@@ -178,50 +212,50 @@ def _prior_terms(
     return value, gradient, by_border
 
 
-class _Solved(NamedTuple):
-    """Factor of the whole Hessian: chain, border solution V = Hxx⁻¹ Hxe, Cholesky of the corner's complement."""
-
-    factor: Factor
-    border_solution: jax.Array
-    corner: tuple[list[jax.Array], list[jax.Array]]
-
-
-def _complement(
-    blocks: _PriorBlocks, border_solution: jax.Array
-) -> tuple[list[jax.Array], list[jax.Array]]:
+def _complement(blocks: _PriorBlocks, border_solution: jax.Array) -> Corner:
     schur = blocks.corner[:, :, None] - jnp.einsum("tij,tikb->jkb", blocks.border, border_solution)
-    return cholesky(0.5 * (schur + schur.transpose(1, 0, 2)))
+    columns, inverse = cholesky(0.5 * (schur + schur.transpose(1, 0, 2)))
+    return Corner(jnp.stack(columns, axis=1), jnp.stack(inverse))
 
 
-def _solve_corner(corner: tuple[list[jax.Array], list[jax.Array]], right: jax.Array) -> jax.Array:
-    return solve_upper(*corner, solve_lower(*corner, right))
-
-
-def _right_hand(blocks: _PriorBlocks, gradient: jax.Array) -> jax.Array:
-    n_lanes = gradient.shape[-1]
-    border = jnp.broadcast_to(blocks.border[..., None], (*blocks.border.shape, n_lanes))
-    return jnp.concatenate([gradient[:, :, None], border], axis=2)
+def solve_corner(corner: Corner, right: jax.Array) -> jax.Array:
+    """Solve with the border's Schur complement, right of shape (D, k, lane)."""
+    columns = [corner.lower[:, j] for j in range(corner.lower.shape[0])]
+    inverse = list(corner.inverse_diagonal)
+    return solve_upper(columns, inverse, solve_lower(columns, inverse, right))
 
 
 def _combine(
-    blocks: _PriorBlocks, solved: _Solved, chain_solution: jax.Array, by_border: jax.Array
-) -> tuple[jax.Array, jax.Array]:
+    blocks: _PriorBlocks,
+    border_solution: jax.Array,
+    corner: Corner,
+    chain_solution: jax.Array,
+    by_border: jax.Array,
+) -> Path:
     """Solution of the bordered system from Hxx⁻¹ g and g_e."""
     pulled = by_border - jnp.einsum("tij,tib->jb", blocks.border, chain_solution)
-    e = _solve_corner(solved.corner, pulled[:, None])[:, 0]
-    return chain_solution - jnp.einsum("tijb,jb->tib", solved.border_solution, e), e
+    e = solve_corner(corner, pulled[:, None])[:, 0]
+    return Path(chain_solution - jnp.einsum("tijb,jb->tib", border_solution, e), e)
 
 
-def _direction(
-    blocks: _PriorBlocks, hessian: jax.Array, gradient: jax.Array, by_border: jax.Array
-) -> tuple[jax.Array, jax.Array]:
-    factor, forward = factorise(
-        blocks.diagonal[..., None] + hessian, blocks.off[..., None], _right_hand(blocks, gradient)
-    )
+class _Step(NamedTuple):
+    """A Newton step, and the factors it came from."""
+
+    direction: Path
+    factor: Factor
+    border_solution: jax.Array
+    corner: Corner
+
+
+def _newton_step(blocks: _PriorBlocks, hessian: jax.Array, slack: Path) -> _Step:
+    border = jnp.broadcast_to(blocks.border[..., None], (*blocks.border.shape, slack.x.shape[-1]))
+    right = jnp.concatenate([slack.x[:, :, None], border], axis=2)
+    factor, forward = factorise(blocks.diagonal[..., None] + hessian, blocks.off[..., None], right)
     solution = substitute_backward(factor, forward)
     border_solution = solution[:, :, 1:]
-    solved = _Solved(factor, border_solution, _complement(blocks, border_solution))
-    return _combine(blocks, solved, solution[:, :, 0], by_border)
+    corner = _complement(blocks, border_solution)
+    direction = _combine(blocks, border_solution, corner, solution[:, :, 0], slack.e)
+    return _Step(direction, factor, border_solution, corner)
 
 
 @partial(jax.jit, static_argnames=("setup",))
@@ -230,16 +264,15 @@ def newton_sweep(params: Params, setup: Setup, chunk: Chunk, path: Path) -> Path
     data, prior, inputs, blocks = _begin(params, setup, chunk)
     _, gradient, hessian = _data_terms(params, setup, chunk, data, path.x)
     _, by_x, by_border = _prior_terms(prior, inputs, setup.n_before, path)
-    dx, de = _direction(blocks, hessian, gradient + by_x, by_border)
-    return Path(path.x + dx, path.e + de)
+    step = _newton_step(blocks, hessian, Path(gradient + by_x, by_border)).direction
+    return Path(path.x + step.x, path.e + step.e)
 
 
 def _begin(
-    params: Params, setup: Setup, chunk: Chunk
+    params: Params, setup: Setup, chunk: Chunk, given: tuple[PathPrior, jax.Array] | None = None
 ) -> tuple[_Data, PathPrior, jax.Array, _PriorBlocks]:
     n_time = chunk.mask.shape[0]
-    prior = path_prior(params, setup, n_time)
-    inputs = path_inputs(params, setup, n_time, chunk.rows)
+    prior, inputs = given or (path_prior(params, setup, n_time), path_inputs(params, setup, n_time, chunk.rows))
     return _prepare(params, setup, chunk), prior, inputs, _prior_blocks(prior, setup.n_before)
 
 
@@ -250,93 +283,17 @@ def start_path(setup: Setup, chunk: Chunk) -> Path:
     return Path(jnp.zeros((n_time, d, n_lanes)), jnp.zeros((d, n_lanes)))
 
 
-def _find_mode(
+@partial(jax.jit, static_argnames=("setup",))
+def laplace(
     params: Params,
     setup: Setup,
     chunk: Chunk,
-    begun: tuple[_Data, PathPrior, jax.Array, _PriorBlocks],
     path: Path,
-) -> tuple[Path, jax.Array, jax.Array]:
-    """Damped Newton per lane: a step that lowers the log posterior is halved until it does not."""
-    data, prior, inputs, blocks = begun
-    n_lanes = chunk.weight.shape[0]
-
-    def body(state: tuple) -> tuple:
-        count, held, best, dx, de, length, decrement = state
-        trial = Path(held.x + length * dx, held.e + length * de)
-        value, gradient, hessian = _data_terms(params, setup, chunk, data, trial.x)
-        log_prior, by_x, by_border = _prior_terms(prior, inputs, setup.n_before, trial)
-        total = value + log_prior
-        new_dx, new_de = _direction(blocks, hessian, gradient + by_x, by_border)
-        new_decrement = 0.5 * (
-            jnp.sum((gradient + by_x) * new_dx, axis=(0, 1)) + jnp.sum(by_border * new_de, axis=0)
-        )
-        accept = (total >= best - 1e-9 * (1 + jnp.abs(best))) & jnp.isfinite(new_decrement)
-        held = Path(jnp.where(accept, trial.x, held.x), jnp.where(accept, trial.e, held.e))
-        return (
-            count + 1,
-            held,
-            jnp.where(accept, total, best),
-            jnp.where(accept, new_dx, dx),
-            jnp.where(accept, new_de, de),
-            jnp.where(accept, 1.0, 0.5 * length),
-            jnp.where(accept, new_decrement, decrement),
-        )
-
-    def unfinished(state: tuple) -> jax.Array:
-        count, decrement = state[0], state[-1]
-        return (count < MAX_SWEEPS) & jnp.any((decrement > DECREMENT_TOLERANCE) & (chunk.weight > 0))
-
-    zeros = Path(jnp.zeros_like(path.x), jnp.zeros_like(path.e))
-    start = (
-        jnp.zeros((), dtype=jnp.int32),
-        path,
-        jnp.full(n_lanes, -jnp.inf),
-        zeros.x,
-        zeros.e,
-        jnp.ones(n_lanes),
-        jnp.full(n_lanes, jnp.inf),
-    )
-    count, held, _, dx, de, length, decrement = lax.while_loop(unfinished, body, start)
-    converged = decrement <= DECREMENT_TOLERANCE
-    last = jnp.where(converged, length, 0.0)
-    return Path(held.x + last * dx, held.e + last * de), count, converged
-
-
-@partial(jax.jit, static_argnames=("setup",))
-def find_mode(params: Params, setup: Setup, chunk: Chunk, path: Path) -> tuple[Path, jax.Array, jax.Array]:
-    """Mode of every lane's path and border, the sweeps spent, and whether each lane converged."""
-    return _find_mode(params, setup, chunk, _begin(params, setup, chunk), path)
-
-
-def _laplace(
-    params: Params, setup: Setup, chunk: Chunk, path: Path
-) -> tuple[Posterior, tuple, _Solved]:
-    begun = _begin(params, setup, chunk)
-    data, prior, inputs, blocks = begun
-    mode, count, converged = _find_mode(params, setup, chunk, begun, path)
-    value, _, hessian = _data_terms(params, setup, chunk, data, mode.x)
-    log_prior, _, _ = _prior_terms(prior, inputs, setup.n_before, mode)
-    n_lanes, d = chunk.weight.shape[0], setup.latent_dim
-    border = jnp.broadcast_to(blocks.border[..., None], (*blocks.border.shape, n_lanes))
-    factor, forward = factorise(blocks.diagonal[..., None] + hessian, blocks.off[..., None], border)
-    border_solution, cov, lag = invert_band(factor, forward)
-    solved = _Solved(factor, border_solution, _complement(blocks, border_solution))
-    log_det = factor.log_determinant - 2 * sum(jnp.log(r) for r in solved.corner[1])
-    size = 0.5 * d * (chunk.mask.shape[0] + 1) * jnp.log(2 * jnp.pi)
-    total = value + log_prior + size - 0.5 * log_det
-    identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
-    corner_cov = _solve_corner(solved.corner, identity)
-    cross = -jnp.einsum("tijb,jkb->tikb", border_solution, corner_cov)
-    cov = cov - jnp.einsum("tikb,tjkb->tijb", cross, border_solution)
-    lag = lag.at[:-1].add(-jnp.einsum("tikb,tjkb->tijb", cross[:-1], border_solution[1:]))
-    posterior = Posterior(mode, total, count, converged, cov, lag, cross, corner_cov)
-    return posterior, begun, solved
-
-
-@partial(jax.jit, static_argnames=("setup",))
-def laplace(params: Params, setup: Setup, chunk: Chunk, path: Path) -> Posterior:
+    given: tuple[PathPrior, jax.Array] | None = None,
+) -> Posterior:
     """Laplace posterior and log marginal likelihood of every lane.
+
+    Damped Newton: a step that lowers a lane's log posterior is halved until it does not.
 
     Parameters
     ----------
@@ -345,28 +302,108 @@ def laplace(params: Params, setup: Setup, chunk: Chunk, path: Path) -> Posterior
     chunk : Chunk
     path : Path
         Where Newton starts.
+    given : (PathPrior, array of shape (time, D, lane)), optional
+        A path prior and known inputs to use in place of those that the parameters imply.
     """
-    return _laplace(params, setup, chunk, path)[0]
+    data, prior, inputs, blocks = _begin(params, setup, chunk, given)
+    n_lanes, d = chunk.weight.shape[0], setup.latent_dim
+
+    def evaluate(trial: Path) -> tuple[jax.Array, Path, jax.Array, _Step]:
+        value, gradient, hessian = _data_terms(params, setup, chunk, data, trial.x)
+        log_prior, by_x, by_border = _prior_terms(prior, inputs, setup.n_before, trial)
+        slack = Path(gradient + by_x, by_border)
+        step = _newton_step(blocks, hessian, slack)
+        decrement = jnp.sum(slack.x * step.direction.x, axis=(0, 1)) + jnp.sum(slack.e * step.direction.e, axis=0)
+        return value + log_prior, slack, 0.5 * decrement, step
+
+    def body(state: _Search) -> _Search:
+        trial = Path(
+            state.held.x + state.length * state.direction.x, state.held.e + state.length * state.direction.e
+        )
+        total, slack, decrement, step = evaluate(trial)
+        accept = (total >= state.best - 1e-9 * (1 + jnp.abs(state.best))) & jnp.isfinite(decrement)
+        return _Search(
+            state.count + 1,
+            Path(jnp.where(accept, trial.x, state.held.x), jnp.where(accept, trial.e, state.held.e)),
+            jnp.where(accept, total, state.best),
+            Path(
+                jnp.where(accept, step.direction.x, state.direction.x),
+                jnp.where(accept, step.direction.e, state.direction.e),
+            ),
+            jnp.where(accept, 1.0, 0.5 * state.length),
+            jnp.where(accept, decrement, state.decrement),
+            slack,
+            step,
+        )
+
+    def unfinished(state: _Search) -> jax.Array:
+        return (state.count < MAX_SWEEPS) & jnp.any((state.decrement > DECREMENT_TOLERANCE) & (chunk.weight > 0))
+
+    zero = Path(jnp.zeros_like(path.x), jnp.zeros_like(path.e))
+    blank = jax.tree.map(lambda leaf: jnp.zeros(leaf.shape, leaf.dtype), jax.eval_shape(evaluate, path)[3])
+    never = jnp.full(n_lanes, jnp.inf)
+    start = _Search(jnp.zeros((), dtype=jnp.int32), path, -never, zero, jnp.ones(n_lanes), never, zero, blank)
+    end = lax.while_loop(unfinished, body, start)
+    step = end.step
+    log_det = step.factor.log_determinant - 2 * jnp.sum(jnp.log(step.corner.inverse_diagonal), axis=0)
+    size = 0.5 * d * (chunk.mask.shape[0] + 1) * jnp.log(2 * jnp.pi)
+    converged = end.decrement <= DECREMENT_TOLERANCE
+    left = jnp.where(converged, end.decrement, 0.0)
+    value = end.best + left + size - 0.5 * log_det
+    return Posterior(
+        end.held, value, end.count, converged, end.slack, left, step.factor, step.border_solution, step.corner
+    )
+
+
+class _Search(NamedTuple):
+    """State of the search for the mode; ``slack`` and ``step`` belong to the last point tried."""
+
+    count: jax.Array
+    held: Path
+    best: jax.Array
+    direction: Path
+    length: jax.Array
+    decrement: jax.Array
+    slack: Path
+    step: _Step
+
+
+def _moments(posterior: Posterior) -> Moments:
+    d, n_lanes = posterior.mode.e.shape
+    cov, lag = invert_band(posterior.factor)
+    identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
+    border = solve_corner(posterior.corner, identity)
+    v = posterior.border_solution
+    cross = -jnp.einsum("tijb,jkb->tikb", v, border)
+    cov = cov - jnp.einsum("tikb,tjkb->tijb", cross, v)
+    lag = lag.at[:-1].add(-jnp.einsum("tikb,tjkb->tijb", cross[:-1], v[1:]))
+    return Moments(cov, lag, cross, border)
+
+
+@jax.jit
+def posterior_moments(posterior: Posterior) -> Moments:
+    """Covariances of a Laplace posterior."""
+    return _moments(posterior)
 
 
 def _prior_surrogate(
-    params: Params, setup: Setup, chunk: Chunk, posterior: Posterior, lean: Path
+    params: Params, setup: Setup, chunk: Chunk, mode: Path, moments: Moments, lean: Path
 ) -> jax.Array:
     """A function whose gradient by the parameters is the prior's part of the objective's gradient."""
     n_time, before = chunk.mask.shape[0], setup.n_before
     prior = path_prior(params, setup, n_time)
     inputs = path_inputs(params, setup, n_time, chunk.rows)
-    step, anchor = _residuals(prior, inputs, before, posterior.mode)
+    step, anchor = _residuals(prior, inputs, before, mode)
     turn, turn_anchor = _residuals(prior, jnp.zeros_like(inputs), before, lean)
     weight = chunk.weight
     energy = jnp.sum(step * (0.5 * step + turn), axis=1) @ weight
     held = prior.anchor_precision @ anchor
     total = -energy @ prior.precision - jnp.sum(held * (0.5 * anchor + turn_anchor), axis=0) @ weight
     total = total + jnp.sum(weight) * prior.log_normaliser
-    now = posterior.covariance @ weight
-    lag = posterior.lag_one[:-1] @ weight
-    cross = posterior.cross @ weight
-    corner = posterior.border_covariance @ weight
+    now = moments.covariance @ weight
+    lag = moments.lag_one[:-1] @ weight
+    cross = moments.cross @ weight
+    corner = moments.border @ weight
     f, g = prior.transition, prior.border
     spread = jnp.einsum("tii->t", now[1:]) + jnp.einsum("tij,tjk,tik->t", f, now[:-1], f)
     spread = spread + jnp.einsum("tij,jk,tik->t", g, corner, g)
@@ -380,23 +417,24 @@ def _prior_surrogate(
 
 @partial(jax.jit, static_argnames=("setup",))
 def laplace_gradient(
-    params: Params, setup: Setup, chunk: Chunk, path: Path
-) -> tuple[jax.Array, Params, Path, tuple[jax.Array, jax.Array]]:
-    """Summed Laplace log marginal likelihood of a chunk and its exact gradient.
+    params: Params, setup: Setup, chunk: Chunk, posterior: Posterior
+) -> tuple[Params, Moments, jax.Array]:
+    """Exact gradient of a chunk's summed Laplace log marginal likelihood, and the moments it needs.
+
+    The third result (lane,) is what is to be added to each value, because the log determinant was
+    taken at a point that Newton left a little short of the mode.
 
     With H the Hessian at the mode and Σ its inverse, the gradient is the partial derivative of
     log p(y, x) - ½ log|H| at the mode plus the mode's own movement, u·∂∇ₓlog p with
     u = Σ ∂(-½ log|H|)/∂x: no iteration is unrolled.
 
-    Returns
-    -------
-    value : array, shape ()
-    gradient : dict of arrays
-    mode : Path
-    (sweeps, n_unconverged)
+    Parameters
+    ----------
+    posterior : Posterior
+        From `laplace` with the same parameters.
     """
-    posterior, begun, solved = _laplace(params, setup, chunk, path)
-    data, _, _, blocks = begun
+    data, _, _, blocks = _begin(params, setup, chunk)
+    moments = _moments(posterior)
     d = setup.latent_dim
     x = posterior.mode.x
     n_time, _, n_lanes = x.shape
@@ -410,19 +448,18 @@ def laplace_gradient(
     slope = (curvature.slope * used).reshape(n, -1)
     i, j, table = pair_index(d)
     twice = np.where(i == j, 1.0, 2.0)
-    pairs = posterior.covariance[:, i, j].transpose(1, 0, 2).reshape(len(i), -1)
+    pairs = moments.covariance[:, i, j].transpose(1, 0, 2).reshape(len(i), -1)
     spread = (data.stack[1 + d :].T * twice) @ pairs
     bent = -0.5 * slope * spread
     pull = (c.T @ bent).reshape(d, n_time, n_lanes).transpose(1, 0, 2)
-    forward = substitute_forward(solved.factor, pull[:, :, None])
-    turn = substitute_backward(solved.factor, forward)[:, :, 0]
-    turn_x, turn_e = _combine(blocks, solved, turn, jnp.zeros((d, n_lanes)))
-    lean = Path(turn_x, turn_e)
+    forward = substitute_forward(posterior.factor, pull[:, :, None])
+    turn = substitute_backward(posterior.factor, forward)[:, :, 0]
+    lean = _combine(blocks, posterior.border_solution, posterior.corner, turn, jnp.zeros((d, n_lanes)))
     flat_x = x.transpose(1, 0, 2).reshape(d, -1)
-    flat_turn = turn_x.transpose(1, 0, 2).reshape(d, -1)
+    flat_turn = lean.x.transpose(1, 0, 2).reshape(d, -1)
     by_eta = score + bent - weight * (c @ flat_turn)
     folded = (weight @ pairs.T)[:, table]
-    gradient = jax.grad(_prior_surrogate)(params, setup, chunk, posterior, lean)
+    gradient = jax.grad(_prior_surrogate)(params, setup, chunk, posterior.mode, moments, lean)
     gradient["readout"] = by_eta @ flat_x.T + score @ flat_turn.T - jnp.einsum("nij,nj->ni", folded, c)
     by_trial = by_eta.reshape(n, n_time, n_lanes).sum(axis=1)
     gradient["log_rate"] = by_trial.sum(axis=1)
@@ -433,5 +470,5 @@ def laplace_gradient(
         seen = jnp.sum(used)
         bend = jnp.sum(spread * used.reshape(-1), axis=1)
         gradient["log_variance"] = 0.5 * (precision * (jnp.sum(error, axis=1) + bend) - seen)
-    failed = jnp.sum(~posterior.converged * chunk.weight)
-    return posterior.value @ chunk.weight, gradient, posterior.mode, (posterior.sweeps, failed)
+    short = jnp.sum(lean.x * posterior.slack.x, axis=(0, 1)) + jnp.sum(lean.e * posterior.slack.e, axis=0)
+    return gradient, moments, short

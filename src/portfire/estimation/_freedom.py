@@ -1,0 +1,56 @@
+"""Which parameters an account frees, and how many that is."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from portfire.accounts import Account
+from portfire.dynamics import Setup
+
+
+@dataclass(frozen=True)
+class Freedom:
+    """Free pushes of an account.
+
+    Parameters
+    ----------
+    prompt, lasting : arrays of int
+        Free columns of pushes at the set cue, and of pushes that last.
+    initial_factor, sustained_factor : bool
+        Whether the trial source may push initially, and lastingly.
+    """
+
+    prompt: np.ndarray
+    lasting: np.ndarray
+    initial_factor: bool
+    sustained_factor: bool
+
+
+def free_parameters(account: Account, setup: Setup) -> Freedom:
+    """What ``account`` frees in a model of this setup."""
+    allowed = [
+        k for k, column in enumerate(setup.columns) if account.allows(column.source, column.persistence_s)
+    ]
+    prompt = [k for k in allowed if setup.columns[k].persistence_s == 0]
+    lasting = [k for k in allowed if setup.columns[k].persistence_s > 0]
+    return Freedom(
+        np.array(prompt, dtype=int),
+        np.array(lasting, dtype=int),
+        account.allows("trial", 0.0),
+        account.allows("trial", float("inf")),
+    )
+
+
+def project(params: dict[str, np.ndarray], freedom: Freedom) -> dict[str, np.ndarray]:
+    """The parameters with everything that is not free put to zero."""
+    push = np.zeros_like(params["push"])
+    for columns in (freedom.prompt, freedom.lasting):
+        push[:, columns] = params["push"][:, columns]
+    return {
+        **params,
+        "push": push,
+        "initial_factor": params["initial_factor"] * float(freedom.initial_factor),
+        "sustained_factor": params["sustained_factor"] * float(freedom.sustained_factor),
+    }
