@@ -12,7 +12,7 @@ from portfire.dynamics._linear import (
 from portfire.dynamics._models import find_model, shipped_models
 from portfire.dynamics._readouts import READOUTS, Curvature, Readout
 from portfire.dynamics._setup import Setup, make_setup
-from portfire.dynamics._spec import ModelFile, SimulateSettings, read_model
+from portfire.dynamics._spec import ModelFile, SimulateSettings, model_from_dict, model_to_dict, read_model
 
 __all__ = [
     "READOUTS",
@@ -27,6 +27,8 @@ __all__ = [
     "find_model",
     "initial_covariance",
     "make_setup",
+    "model_from_dict",
+    "model_to_dict",
     "parameter_shapes",
     "path_inputs",
     "path_prior",

@@ -149,3 +149,16 @@ def read_model(model: str | Path | Mapping[str, Any] | ModelFile) -> ModelFile:
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise InputError(f"{path}: this is not a TOML file ({error}).") from error
     return model_from_dict(tables, path.stem, str(path))
+
+
+def model_to_dict(model: ModelFile) -> dict[str, Any]:
+    """Nested tables as they stand in a model file; `read_model` takes them back."""
+    tables: dict[str, Any] = {
+        table: {key: getattr(model, name) for key, name in keys.items()}
+        for table, keys in _KEYS.items()
+        if table != "simulate"
+    }
+    tables["simulate"] = {
+        key: list(value) if isinstance(value, tuple) else value for key, value in vars(model.simulate).items()
+    }
+    return tables

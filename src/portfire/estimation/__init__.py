@@ -1,0 +1,21 @@
+"""Fits: starting values, the objective, its ascent, and what a fit can then say."""
+
+from portfire.estimation._fit import Fit, Hazard, fit, fit_from_parts, load_fit, with_hazard
+from portfire.estimation._freedom import free_parameters
+from portfire.estimation._hazard import fit_hazard
+from portfire.estimation._infer import infer_trials
+from portfire.estimation._score import sample_loglik, score_trials
+
+__all__ = [
+    "Fit",
+    "Hazard",
+    "fit",
+    "fit_from_parts",
+    "fit_hazard",
+    "free_parameters",
+    "infer_trials",
+    "load_fit",
+    "sample_loglik",
+    "score_trials",
+    "with_hazard",
+]

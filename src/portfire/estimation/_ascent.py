@@ -1,0 +1,100 @@
+"""From trials to a maximum: cold from the data, or warm from a fit that contains or is contained."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from portfire.accounts import Account
+from portfire.dynamics import Setup
+from portfire.estimation._freedom import Freedom, free_parameters, project
+from portfire.estimation._objective import Objective, Values
+from portfire.estimation._optimise import ascend
+from portfire.estimation._start import start_values
+from portfire.inference import Packed, Path, pack
+from portfire.session import Trials
+
+_SUBSET_TRIALS = 128
+
+
+@dataclass(frozen=True)
+class Maximum:
+    """Where the search ended, with the modes of all paths."""
+
+    params: Values
+    value: float
+    trace: tuple[float, ...]
+    status: str
+    packed: Packed
+    paths: list[Path]
+
+
+def _open_covariances(objective: Objective, params: Values, setup: Setup, freedom: Freedom) -> Values:
+    """Start covariances that are free but zero from the positive eigenvectors of their score.
+
+    At zero the gradient by the factor vanishes although the score by the covariance may not; a score
+    without a positive eigenvalue marks a maximum at the boundary, and the factor stays at zero.
+    """
+    unit = float(setup.n_reference * params["noise"])
+    sizes = {"initial_factor": setup.initial_bins * float(params["noise"]), "sustained_factor": unit}
+    allowed = {"initial_factor": freedom.initial_factor, "sustained_factor": freedom.sustained_factor}
+    for name, size in sizes.items():
+        if not allowed[name] or np.any(params[name]):
+            continue
+        d = setup.latent_dim
+        small = 1e-3 * np.sqrt(size)
+        base, gradient = objective({**params, name: small * np.eye(d)})
+        score = (gradient[name] + gradient[name].T) / (4 * small)
+        values, vectors = np.linalg.eigh(score)
+        if values[-1] <= 0:
+            continue
+        towards = vectors * np.sqrt(np.maximum(values, 0) / values[-1])
+        tried = [(base, params[name])]
+        for share in (0.03, 0.1, 0.3, 1.0):
+            candidate = np.sqrt(share * size) * towards
+            tried.append((objective({**params, name: candidate})[0], candidate))
+        best = max(tried, key=lambda pair: pair[0])[1]
+        # Any positive size serves as a start: the ascent settles it.
+        params = {**params, name: best if np.any(best) else np.sqrt(0.01 * size) * towards}
+    return params
+
+
+def find_maximum(
+    trials: Trials,
+    setup: Setup,
+    account: Account,
+    start: Values | None,
+    tolerance: float,
+    max_iterations: int,
+) -> Maximum:
+    """Maximise the objective for an account.
+
+    A cold search first climbs on a part of the trials, which costs a fraction and ends near enough.
+
+    Parameters
+    ----------
+    start : dict of arrays, optional
+        Parameters of any account on the same setup; projected on what is free, and opened where a
+        covariance is free but zero.
+    tolerance : float
+        In nats.
+    """
+    freedom = free_parameters(account, setup)
+    if start is None:
+        params = project(start_values(trials, setup), freedom)
+        if len(trials) >= 2 * _SUBSET_TRIALS:
+            step = len(trials) // _SUBSET_TRIALS
+            part = Objective(pack(trials[np.arange(0, len(trials), step)], setup), setup)
+            params = ascend(part, params, setup, freedom, 0.5, max_iterations).params
+            part.close()
+    else:
+        params = project(start, freedom)
+    packed = pack(trials, setup)
+    objective = Objective(packed, setup)
+    params = _open_covariances(objective, params, setup, freedom)
+    ascent = ascend(objective, params, setup, freedom, tolerance, max_iterations)
+    objective(ascent.params)
+    objective.close()
+    status = "unconverged paths" if objective.n_unconverged else ascent.status
+    return Maximum(ascent.params, ascent.value, ascent.trace, status, packed, objective.paths)

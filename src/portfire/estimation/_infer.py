@@ -1,0 +1,69 @@
+"""Posterior of state and pushes of single trials, smoothed or causal."""
+
+from __future__ import annotations
+
+import numpy as np
+import xarray as xr
+
+from portfire.errors import InputError
+from portfire.estimation._fit import Fit
+from portfire.estimation._objective import to_device
+from portfire.inference import laplace, pack, posterior_moments, start_path
+from portfire.session import Trials
+
+
+def causal_mask(trials: Trials, until_s: float | None) -> np.ndarray:
+    """Bins that end at or before ``until_s`` seconds after the set cue (whole bins), with the run-up."""
+    if until_s is None:
+        return trials.mask
+    last = trials.n_before + round(until_s / trials.bin_s)
+    if last < 1:
+        raise InputError(f"until_s = {until_s} leaves no bin; give a later time, or bin with a run-up.")
+    mask = trials.mask.copy()
+    mask[:, last:] = False
+    return mask
+
+
+def infer_trials(fitted: Fit, trials: Trials, until_s: float | None = None) -> xr.Dataset:
+    """Canonical posterior means and covariances; see `Fit.infer`."""
+    setup, params = fitted.setup, fitted.params
+    mask = causal_mask(trials, until_s)
+    packed = pack(trials, setup, mask)
+    device = to_device(params)
+    state, state_cov, e, e_cov = [], [], [], []
+    for chunk in packed.chunks:
+        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
+        moments = posterior_moments(posterior)
+        state.append(np.asarray(posterior.mode.x))
+        state_cov.append(np.asarray(moments.covariance))
+        e.append(np.asarray(posterior.mode.e))
+        e_cov.append(np.asarray(moments.border))
+    to = fitted.canonical
+    x = packed.gather_time(state)
+    cov = packed.gather_time(state_cov)
+    rows = packed.gather([np.asarray(chunk.rows) for chunk in packed.chunks])
+    lasting = [k for k, column in enumerate(setup.columns) if column.persistence_s > 0]
+    lift = params["sustained_factor"]
+    sustained = rows[:, lasting] @ params["push"][:, lasting].T + packed.gather(e) @ lift.T
+    sustained_cov = lift @ packed.gather(e_cov) @ lift.T
+    seen = mask.copy()
+    seen[:, : setup.n_before] = True
+    seen[:, setup.n_before] = True
+    x, cov = np.where(seen[..., None], x, np.nan), np.where(seen[..., None, None], cov, np.nan)
+    at_cue = setup.n_before
+    time = (np.arange(x.shape[1]) - at_cue) * setup.bin_s
+    return xr.Dataset(
+        {
+            "state": (("trial", "time", "latent"), x @ to.T),
+            "state_cov": (("trial", "time", "latent", "latent2"), to @ cov @ to.T),
+            "initial": (("trial", "latent"), x[:, at_cue] @ to.T),
+            "initial_cov": (("trial", "latent", "latent2"), to @ cov[:, at_cue] @ to.T),
+            "sustained": (("trial", "latent"), sustained @ to.T),
+            "sustained_cov": (("trial", "latent", "latent2"), to @ sustained_cov @ to.T),
+        },
+        coords={"trial": list(trials.trial), "time": time, "latent": np.arange(len(to))},
+        attrs={
+            "until_s": np.inf if until_s is None else float(until_s),
+            "units": "log rate: one unit of a latent moves the log rates by its orthonormal readout column",
+        },
+    )

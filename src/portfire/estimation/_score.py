@@ -1,0 +1,69 @@
+"""Held-out scores of a fit: log marginal likelihoods of single trials."""
+
+from __future__ import annotations
+
+from concurrent.futures import ThreadPoolExecutor
+
+import numpy as np
+import pandas as pd
+
+from portfire.estimation._fit import Fit
+from portfire.estimation._objective import n_threads, to_device
+from portfire.inference import (
+    Packed,
+    importance,
+    lane_keys,
+    laplace,
+    pack,
+    start_path,
+)
+from portfire.session import Trials
+
+N_PAIRS = 48
+LEAST_EFFECTIVE = 0.3
+
+
+def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[np.ndarray, np.ndarray]:
+    """Importance-sampled log marginal likelihood and its standard error, shape (trial,) each.
+
+    Chunks in which some trial's effective sample size falls below 30 % are scored by the guided
+    particle filter instead, for those trials.
+    """
+    device, setup = to_device(fitted.params), fitted.setup
+
+    def one(chunk):  # type: ignore[no-untyped-def]
+        keys = lane_keys(fitted.seed, chunk)
+        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
+        sampled = importance(device, setup, chunk, posterior, keys, n_pairs)
+        loglik, se = np.array(sampled.loglik), np.array(sampled.se)
+        poor = (np.asarray(sampled.effective) < LEAST_EFFECTIVE) & (np.asarray(chunk.weight) > 0)
+        if poor.any():
+            from portfire.inference import filter_particles
+
+            filtered = filter_particles(device, setup, chunk, posterior, keys)
+            loglik[poor], se[poor] = np.asarray(filtered.loglik)[poor], np.asarray(filtered.se)[poor]
+        return loglik, se
+
+    with ThreadPoolExecutor(n_threads()) as pool:
+        results = list(pool.map(one, packed.chunks))
+    return packed.gather([r[0] for r in results]), packed.gather([r[1] for r in results])
+
+
+def score_trials(fitted: Fit, trials: Trials) -> pd.DataFrame:
+    """A row a trial: trial, loglik, loglik_se (nats), n_spikes, n_bins (after the set cue)."""
+    before = trials.n_before
+    loglik, se = sample_loglik(fitted, pack(trials, fitted.setup))
+    if before:
+        run_up = np.zeros_like(trials.mask)
+        run_up[:, :before] = True
+        known, known_se = sample_loglik(fitted, pack(trials, fitted.setup, run_up))
+        loglik, se = loglik - known, np.hypot(se, known_se)
+    return pd.DataFrame(
+        {
+            "trial": list(trials.trial),
+            "loglik": loglik,
+            "loglik_se": se,
+            "n_spikes": trials.counts[:, before:].sum(axis=(1, 2)).astype(int),
+            "n_bins": np.asarray(trials.n_bins).astype(int),
+        }
+    )
