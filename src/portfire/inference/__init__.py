@@ -4,6 +4,7 @@ from portfire.inference import _configure
 from portfire.inference._chain import Factor, factorise, invert_band, substitute_backward, substitute_forward
 from portfire.inference._chunk import Chunk, Packed, pack
 from portfire.inference._importance import Sampled, correction_size, draw_deviations, importance, lane_keys
+from portfire.inference._particles import Filtered, filter_particles, particle_posterior, refine
 from portfire.inference._smoother import (
     Moments,
     Path,
@@ -20,6 +21,7 @@ _configure.configure()
 __all__ = [
     "Chunk",
     "Factor",
+    "Filtered",
     "Moments",
     "Packed",
     "Path",
@@ -28,6 +30,7 @@ __all__ = [
     "correction_size",
     "draw_deviations",
     "factorise",
+    "filter_particles",
     "importance",
     "invert_band",
     "lane_keys",
@@ -35,7 +38,9 @@ __all__ = [
     "laplace_gradient",
     "newton_sweep",
     "pack",
+    "particle_posterior",
     "posterior_moments",
+    "refine",
     "start_path",
     "substitute_backward",
     "substitute_forward",
