@@ -1,8 +1,12 @@
 """Folds, gains, p values and verdicts: what the held-out scores say about the accounts."""
 
 from ._boundary import cone_weights, count_parameters, likelihood_ratio_p, mixture_weights
+from ._carry import carrying_time_constant
+from ._contrast import Contrast, Entry, Scored, contrast_sources
 from ._folds import block_of, block_size, fold_of, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
+from ._ladder import Ladder, climb, contrast_accounts
+from ._size import Choice, Deficit, choose_smallest
 from ._verdict import (
     Evidence,
     Verdict,
@@ -15,6 +19,17 @@ from ._verdict import (
 )
 
 __all__ = [
+    "Choice",
+    "Contrast",
+    "Deficit",
+    "Entry",
+    "Ladder",
+    "Scored",
+    "carrying_time_constant",
+    "choose_smallest",
+    "climb",
+    "contrast_accounts",
+    "contrast_sources",
     "block_of",
     "block_size",
     "fold_of",

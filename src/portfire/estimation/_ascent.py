@@ -64,6 +64,7 @@ def find_maximum(
     trials: Trials,
     setup: Setup,
     account: Account,
+    drift: bool,
     start: Values | None,
     tolerance: float,
     max_iterations: int,
@@ -74,13 +75,15 @@ def find_maximum(
 
     Parameters
     ----------
+    drift : bool
+        Whether the drift coefficients are free.
     start : dict of arrays, optional
         Parameters of any account on the same setup; projected on what is free, and opened where a
         covariance is free but zero.
     tolerance : float
         In nats.
     """
-    freedom = free_parameters(account, setup)
+    freedom = free_parameters(account, setup, drift)
     if start is None:
         params = project(start_values(trials, setup), freedom)
         if len(trials) >= 2 * _SUBSET_TRIALS:

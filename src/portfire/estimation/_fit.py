@@ -66,6 +66,8 @@ class Fit:
     seed : int
     session : dict
         Labels and scales that new trials must share: units, contexts, sample centre and scale, digest.
+    drift : bool
+        Whether rates were free to change slowly over the session.
     hazard : Hazard or None
     """
 
@@ -78,6 +80,7 @@ class Fit:
     status: str
     seed: int
     session: dict[str, Any]
+    drift: bool = True
     hazard: Hazard | None = None
 
     @property
@@ -165,6 +168,7 @@ class Fit:
             "status": self.status,
             "advice": self.advice,
             "seed": self.seed,
+            "drift": self.drift,
             "session": self.session,
         }
 
@@ -187,6 +191,7 @@ def fit_from_parts(content: Mapping[str, Any], arrays: Mapping[str, np.ndarray])
         status=content["status"],
         seed=int(content["seed"]),
         session=dict(content["session"]),
+        drift=bool(content["drift"]),
         hazard=None if hazard is None else Hazard(float(hazard[0]), np.asarray(hazard[1:])),
     )
 
@@ -277,13 +282,12 @@ def fit(
         raise InputError(
             f"latent_dim = {latent_dim} does not suit {len(trials.unit)} units; give 1 to {len(trials.unit)}."
         )
-    if start is None:
-        with_drift = spec.drift != "off" if drift is None else drift
-        setup = make_setup(trials, spec, latent_dim, with_drift, n_reference)
-    else:
-        setup = start.setup
+    if drift is None:
+        drift = start.drift if start else spec.drift != "off"
+    setup = start.setup if start else make_setup(trials, spec, latent_dim, spec.drift != "off", n_reference)
     whole = Account.full(setup.sources) if account is None else Account.parse(account).restrict(setup.sources)
-    found = find_maximum(trials, setup, whole, start.params if start else None, tolerance, max_iterations)
+    params = start.params if start else None
+    found = find_maximum(trials, setup, whole, drift, params, tolerance, max_iterations)
     return Fit(
         setup=setup,
         account=whole,
@@ -294,6 +298,7 @@ def fit(
         status=found.status,
         seed=seed,
         session=describe_session(trials),
+        drift=drift and setup.n_drift > 0,
     )
 
 

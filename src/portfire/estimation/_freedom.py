@@ -20,16 +20,19 @@ class Freedom:
         Free columns of pushes at the set cue, and of pushes that last.
     initial_factor, sustained_factor : bool
         Whether the trial source may push initially, and lastingly.
+    drift : bool
+        Whether rates may change slowly over the session.
     """
 
     prompt: np.ndarray
     lasting: np.ndarray
     initial_factor: bool
     sustained_factor: bool
+    drift: bool
 
 
-def free_parameters(account: Account, setup: Setup) -> Freedom:
-    """What ``account`` frees in a model of this setup."""
+def free_parameters(account: Account, setup: Setup, drift: bool = True) -> Freedom:
+    """What ``account`` frees in a model of this setup, with or without slow drift of the rates."""
     allowed = [
         k for k, column in enumerate(setup.columns) if account.allows(column.source, column.persistence_s)
     ]
@@ -40,6 +43,7 @@ def free_parameters(account: Account, setup: Setup) -> Freedom:
         np.array(lasting, dtype=int),
         account.allows("trial", 0.0),
         account.allows("trial", float("inf")),
+        drift and setup.n_drift > 0,
     )
 
 
@@ -51,6 +55,17 @@ def project(params: dict[str, np.ndarray], freedom: Freedom) -> dict[str, np.nda
     return {
         **params,
         "push": push,
+        "drift": params["drift"] * float(freedom.drift),
         "initial_factor": params["initial_factor"] * float(freedom.initial_factor),
         "sustained_factor": params["sustained_factor"] * float(freedom.sustained_factor),
     }
+
+
+def count_route(account: Account, source: str, persistence_s: float, setup: Setup) -> int:
+    """Free parameters of one route of a source: D a column, or D(D+1)/2 for the trial source."""
+    d = setup.latent_dim
+    if not account.allows(source, persistence_s):
+        return 0
+    if source == "trial":
+        return d * (d + 1) // 2
+    return d * sum(c.source == source and c.persistence_s == persistence_s for c in setup.columns)

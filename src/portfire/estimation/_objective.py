@@ -16,8 +16,8 @@ Values = dict[str, np.ndarray]
 
 
 def n_threads() -> int:
-    """Threads for chunks: one in a worker process (PORTFIRE_THREADS=1), else one a core."""
-    return int(os.environ.get("PORTFIRE_THREADS") or len(os.sched_getaffinity(0)))
+    """Threads for chunks: as many as XLA's own pool is told to have (NPROC), else one a core."""
+    return int(os.environ.get("NPROC") or os.cpu_count() or 1)
 
 
 def to_device(params: Values) -> dict[str, jax.Array]:

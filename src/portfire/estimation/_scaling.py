@@ -89,7 +89,8 @@ class Scaling:
         moved = np.linalg.solve(self.units.transpose(0, 2, 1), parts["units"][:, :, None])[:, :, 0]
         out["readout"] += moved[:, :d]
         out["log_rate"] += moved[:, d]
-        out["drift"] += moved[:, d + 1 :]
+        if free.drift:
+            out["drift"] += moved[:, d + 1 :]
         rows = solve_triangular(self.steps, parts["steps"].T, lower=True, trans="T").T
         n_cue = out["cue"].shape[1]
         out["transition"] += rows[:, :d]
@@ -110,9 +111,8 @@ class Scaling:
     def pull_back(self, gradient: dict[str, np.ndarray]) -> np.ndarray:
         """Gradient by the flat vector from the gradient by the parameters."""
         free = self.freedom
-        units = np.concatenate(
-            [gradient["readout"], gradient["log_rate"][:, None], gradient["drift"]], axis=1
-        )
+        blocks = [gradient["readout"], gradient["log_rate"][:, None]]
+        units = np.concatenate([*blocks, gradient["drift"]] if free.drift else blocks, axis=1)
         pieces = [np.linalg.solve(self.units, units[:, :, None]).ravel()]
         rows = np.concatenate(
             [
@@ -154,7 +154,7 @@ def make_scaling(
     """
     d, before = setup.latent_dim, setup.n_before
     n_cue, lasting, prompt = setup.model.n_bumps, freedom.lasting, freedom.prompt
-    k_unit, k_step = d + 1 + setup.n_drift, d + 1 + n_cue + len(lasting)
+    k_unit, k_step = d + 1 + setup.n_drift * freedom.drift, d + 1 + n_cue + len(lasting)
     units = np.zeros((setup.n_units, k_unit, k_unit))
     steps = np.zeros((k_step, k_step))
     rows_gram = np.zeros((len(prompt), len(prompt)))
@@ -165,9 +165,10 @@ def make_scaling(
         at = np.nonzero(mask)
         spread = np.moveaxis(cov, -1, 1)[at]
         features = np.concatenate(
-            [np.moveaxis(x, -1, 1)[at], np.ones((len(at[0]), 1)), drift.T[at[1]]], axis=1
+            [np.moveaxis(x, -1, 1)[at], np.ones((len(at[0]), 1)), drift.T[at[1], : k_unit - d - 1]], axis=1
         )
-        eta = features[:, :d] @ centre["readout"].T + centre["log_rate"] + features[:, d + 1 :] @ centre["drift"].T
+        eta = features[:, :d] @ centre["readout"].T + centre["log_rate"]
+        eta = eta + features[:, d + 1 :] @ centre["drift"][:, : k_unit - d - 1].T
         if setup.model.readout == "gaussian":
             weight = np.broadcast_to(np.exp(-centre["log_variance"]), eta.shape)
         else:
@@ -195,7 +196,7 @@ def make_scaling(
     for _ in range(setup.initial_bins):
         cov = transition @ cov @ transition.T + noise * np.eye(d)
     initial_cov = cov + start_cov
-    prior = np.diag([0.0] * (d + 1) + [1.0] * setup.n_drift)
+    prior = np.diag([0.0] * (d + 1) + [1.0] * (k_unit - d - 1))
     scalars: dict[str, np.ndarray] = {}
     if "log_variance" in centre:
         scalars["log_variance"] = np.full(setup.n_units, np.sqrt(2.0 / max(trials_bins(packed), 1)))

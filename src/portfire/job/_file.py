@@ -56,15 +56,15 @@ class Compare:
         Sources whose routes are contrasted; empty skips the contrasts.
     folds : int
         Number of folds.
-    latent_dims : tuple of int
-        Numbers of latent dimensions to choose from, ascending.
+    latent_dims : tuple of int or None
+        Numbers of latent dimensions to choose from, ascending; None: 2 to 5, as far as the units allow.
     min_gain : float
         A gain below this (nats/trial) is no gain worth having.
     """
 
     sources: tuple[str, ...]
     folds: int
-    latent_dims: tuple[int, ...]
+    latent_dims: tuple[int, ...] | None
     min_gain: float
 
 
@@ -173,8 +173,11 @@ def read_job(path: str | Path, out: str | Path | None = None) -> Job:
     return job
 
 
-def check_job(job: Job, n_units: int, n_trials: int) -> None:
-    """Check a job against the size of a session.
+DEFAULT_DIMS = (2, 3, 4, 5)
+
+
+def check_job(job: Job, n_units: int, n_trials: int) -> Job:
+    """Check a job against the size of a session, and settle the defaults that hang on it.
 
     Parameters
     ----------
@@ -183,16 +186,24 @@ def check_job(job: Job, n_units: int, n_trials: int) -> None:
     n_units, n_trials : int
         Units and trials of the session that can be used.
 
+    Returns
+    -------
+    Job
+        With numbers of latent dimensions: where the job gives none, 2 to 5 but fewer than the units
+        (one dimension at least).
+
     Raises
     ------
     InputError
         If there are more latent dimensions than units, or too few trials for the folds.
     """
     where = job.source or job.sessions[0]
-    largest = max(job.compare.latent_dims)
-    if largest > n_units:
+    dims = job.compare.latent_dims
+    if dims is None:
+        dims = tuple(d for d in DEFAULT_DIMS if d < n_units) or (1,)
+    if max(dims) > n_units:
         raise InputError(
-            f"{where}: [compare] latent_dims goes up to {largest}, but the session has {n_units} usable "
+            f"{where}: [compare] latent_dims goes up to {max(dims)}, but the session has {n_units} usable "
             f"units; at most {n_units} dimensions can be fitted"
         )
     needed = 4 * job.compare.folds
@@ -201,6 +212,7 @@ def check_job(job: Job, n_units: int, n_trials: int) -> None:
             f"{where}: [compare] folds is {job.compare.folds}, which needs {needed} trials, "
             f"but the session has {n_trials} usable ones"
         )
+    return replace(job, compare=replace(job.compare, latent_dims=dims))
 
 
 def _from_file(path: Path) -> Job:

@@ -135,7 +135,7 @@ RULES = (
     Rule(
         "compare",
         "latent_dims",
-        (2, 3, 4, 5),
+        None,
         "a list of different integers, each 1 or more",
         _list_of(_integer(1), least=1, ordered=True),
     ),

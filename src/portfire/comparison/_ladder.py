@@ -1,0 +1,98 @@
+"""The accounts that a contrast needs, and fits of them that agree with one another."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+from ..accounts import ROUTES, Account
+from ..estimation import Fit
+
+AGREEMENT = 0.05
+_MAX_ROUNDS = 4
+
+Refit = Callable[[Account, Fit], Fit]
+
+
+def contrast_accounts(present: tuple[str, ...], sources: Sequence[str]) -> tuple[Account, ...]:
+    """The full account, then for every contrasted source the three that take something from it."""
+    full = Account.full(present)
+    taken = [full.replace(source, route) for source in sources for route in ROUTES if route != "both"]
+    return (full, *taken)
+
+
+@dataclass(frozen=True)
+class Ladder:
+    """Fits of nested accounts on the same trials.
+
+    Parameters
+    ----------
+    fits : dict of str to Fit
+        By account; the full account first.
+    rounds : int
+        Rounds of refitting until they agreed.
+    agreed : bool
+        Whether no account is left more than 0.05 nats below one that it contains.
+    """
+
+    fits: dict[str, Fit]
+    rounds: int
+    agreed: bool
+
+
+def climb(full: Fit, accounts: Sequence[Account], refit: Refit) -> Ladder:
+    """Fit nested accounts until none is below one that it contains, and none gains from its container.
+
+    Parameters
+    ----------
+    full : Fit
+        Of the account that contains all others.
+    accounts : sequence of Account
+        The full one first.
+    refit : callable
+        ``refit(account, start)`` fits an account from another account's fit.
+
+    Returns
+    -------
+    Ladder
+    """
+    fits: dict[str, Fit] = {str(accounts[0]): full}
+    for account in accounts[1:]:
+        fits[str(account)] = refit(account, full)
+    for n_round in range(_MAX_ROUNDS):
+        raised = _raise_containers(fits, accounts, refit)
+        if not raised:
+            return Ladder(fits, n_round, True)
+        for account in accounts:
+            for larger in raised:
+                if larger != account and larger.contains(account):
+                    again = refit(account, fits[str(larger)])
+                    if again.value > fits[str(account)].value:
+                        fits[str(account)] = again
+    return Ladder(fits, _MAX_ROUNDS, not _behind(fits, accounts))
+
+
+def _behind(fits: dict[str, Fit], accounts: Sequence[Account]) -> list[tuple[Account, Account]]:
+    """Pairs of an account and a smaller one that stands higher."""
+    return [
+        (larger, smaller)
+        for larger in accounts
+        for smaller in accounts
+        if larger != smaller
+        and larger.contains(smaller)
+        and fits[str(smaller)].value > fits[str(larger)].value + AGREEMENT
+    ]
+
+
+def _raise_containers(fits: dict[str, Fit], accounts: Sequence[Account], refit: Refit) -> list[Account]:
+    raised = []
+    # From the smallest container up, so that a rise is handed on within one round.
+    for larger in sorted({pair[0] for pair in _behind(fits, accounts)}, key=str):
+        candidates = [fits[str(smaller)] for container, smaller in _behind(fits, accounts) if container == larger]
+        if not candidates:
+            continue
+        again = refit(larger, max(candidates, key=lambda fitted: fitted.value))
+        if again.value > fits[str(larger)].value:
+            fits[str(larger)] = again
+            raised.append(larger)
+    return raised

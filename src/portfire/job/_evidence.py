@@ -1,0 +1,210 @@
+"""From ladders of fits to contrasts with verdicts, as they stand in the result."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from portfire.accounts import Account
+from portfire.comparison import (
+    Contrast,
+    Scored,
+    Verdict,
+    carrying_time_constant,
+    contrast_sources,
+    describe_mimic,
+    overrule,
+    reconcile,
+)
+from portfire.estimation import Fit, fit_from_parts
+from portfire.job._findings import Findings
+from portfire.job._stages import ALL
+from portfire.job._store import Store
+from portfire.session import explain_by_time
+
+CONFOUNDED = 0.5
+
+
+@dataclass(frozen=True)
+class Evidences:
+    """Contrast rows of the result, the scores behind them, and warnings.
+
+    Parameters
+    ----------
+    rows : tuple of dict
+    scores : DataFrame
+        A row a held-out trial, account and size.
+    n_train : float
+        Mean number of training trials of a fold.
+    warnings : tuple of str
+    """
+
+    rows: tuple[dict[str, Any], ...]
+    scores: pd.DataFrame
+    n_train: float
+    warnings: tuple[str, ...]
+
+
+def collect_contrasts(findings: Findings, store: Store) -> Evidences:
+    """Contrast every source at the chosen size, set beside one dimension fewer and more."""
+    shifts = sorted({shift for shift, _ in findings.ladders}, key=abs)
+    scored, tables, n_train, warnings = {}, [], 0.0, []
+    for shift in shifts:
+        scored[shift], table, mean_train, more = _score_shift(findings, store, shift)
+        tables.append(table)
+        warnings += more
+        if shift == 0:
+            n_train = mean_train
+    sources = findings.job.compare.sources
+    level, min_gain = findings.job.tests.level, findings.job.compare.min_gain
+    rows: list[dict[str, Any]] = []
+    if sources:
+        by_shift = {
+            shift: {c.source: c for c in contrast_sources(s, sources, level, min_gain)}
+            for shift, s in scored.items()
+        }
+        for source in sources:
+            rows.append(_row(findings, store, source, {s: found[source] for s, found in by_shift.items()}))
+    return Evidences(tuple(rows), pd.concat(tables, ignore_index=True), n_train, tuple(warnings))
+
+
+def _score_shift(
+    findings: Findings, store: Store, shift: int
+) -> tuple[Scored, pd.DataFrame, float, list[str]]:
+    trials, folds = findings.trials, findings.job.compare.folds
+    whole = store.read_meta(findings.ladders[shift, ALL])
+    accounts = list(whole["accounts"])
+    loglik = {account: np.full(len(trials), np.nan) for account in accounts}
+    frames, n_train, warnings = [], [], []
+    before = trials.n_before
+    n_spikes = trials.counts[:, before:].sum(axis=(1, 2)).astype(int)
+    for fold in range(folds):
+        ladder = store.read_meta(findings.ladders[shift, fold])
+        n_train.append(ladder["n_train"])
+        size = findings.sizes.chosen[fold]
+        for account in accounts:
+            _, arrays = store.read(ladder["accounts"][account]["key"])
+            rows = arrays["rows"]
+            loglik[account][rows] = arrays["loglik"]
+            frames.append(
+                pd.DataFrame(
+                    {
+                        "trial": [trials.trial[i] for i in rows],
+                        "fold": fold,
+                        "account": account,
+                        "model": findings.job.model.names[size.model],
+                        "latent_dim": ladder["latent_dim"],
+                        "loglik": arrays["loglik"],
+                        "loglik_se": arrays["loglik_se"],
+                        "n_spikes": n_spikes[rows],
+                        "n_bins": np.asarray(trials.n_bins)[rows].astype(int),
+                        "size_shift": shift,
+                    }
+                )
+            )
+        warnings += _complaints(ladder, f"without fold {fold + 1}")
+    warnings += _complaints(whole, "on all trials")
+    start = store.read(next(iter(whole["accounts"].values()))["key"])
+    setup = fit_from_parts(*start).setup
+    values = {account: float(entry["value"]) for account, entry in whole["accounts"].items()}
+    scored = Scored(setup, values, loglik, float(np.mean(n_train)), folds)
+    return scored, pd.concat(frames, ignore_index=True), float(np.mean(n_train)), warnings
+
+
+def _complaints(ladder: dict[str, Any], where: str) -> list[str]:
+    """What a reader should know of fits that did not settle."""
+    place = f"at {ladder['latent_dim']} latent dimensions, {where}"
+    out = []
+    if not ladder["agreed"]:
+        out.append(f"Nested accounts {place} still differed by more than 0.05 nats after several rounds of refitting.")
+    for account, entry in ladder["accounts"].items():
+        if entry["status"] != "converged":
+            out.append(f"The fit of {account} {place} ended with status '{entry['status']}'.")
+    return out
+
+
+def _row(
+    findings: Findings, store: Store, source: str, by_shift: dict[int, Contrast]
+) -> dict[str, Any]:
+    here = by_shift[0]
+    best = findings.sizes.chosen[ALL]
+    at_dims: dict[int, Verdict] = {
+        best.latent_dim + shift: found.verdict for shift, found in by_shift.items() if shift
+    }
+    above = by_shift.get(1)
+    excludes = here.excludes_other_end() and above is not None and _agrees_in_profile(here, above)
+    verdict = reconcile(here.verdict, at_dims, best.latent_dim, excludes)
+    mimic, time_constant = _look_for_mimic(findings, store, source, here, above)
+    confounded = _confounding(findings) if source == "context" else None
+    if confounded is not None and confounded > CONFOUNDED:
+        verdict = overrule(
+            verdict, f"context is confounded with drift, since trial time explains {confounded:.0%} of it"
+        )
+    row: dict[str, Any] = {"source": source, **here.scores}
+    for name, entry in here.entries.items():
+        row[name] = entry.evidence.to_row()
+    row |= {
+        "verdict": verdict.label,
+        "words": verdict.words,
+        "trials_to_close": verdict.trials_to_close,
+        "lr": {
+            name: {
+                "stat": entry.statistic,
+                "df": entry.n_fixed or entry.n_params,
+                "boundary": bool(entry.cov_dims),
+                "p_raw": entry.p_raw,
+            }
+            for name, entry in here.entries.items()
+        },
+        "gain_k": {name: entry.n_params for name, entry in here.entries.items()},
+        "at_dims": {str(d): v.label for d, v in sorted(at_dims.items())},
+        "ends_nats": {
+            str(best.latent_dim + shift): found.end_difference for shift, found in sorted(by_shift.items())
+        },
+        "mimic": mimic,
+        "carrying_mode": time_constant,
+    }
+    if source == "context":
+        row["time_r2"] = confounded
+    if verdict.label == "undetermined":
+        row["open"] = list(verdict.open)
+    return row
+
+
+def _agrees_in_profile(here: Contrast, above: Contrast) -> bool:
+    """Whether one dimension more leaves out the same end of the persistence."""
+    difference = above.end_difference if here.verdict.label == "sustained" else -above.end_difference
+    return difference > 1.92
+
+
+def _look_for_mimic(
+    findings: Findings, store: Store, source: str, here: Contrast, above: Contrast | None
+) -> tuple[str | None, float | None]:
+    """Where the accounts tie at one dimension more: the mode that carries the initial-only separation."""
+    shift = 0 if above is None else 1
+    contrast = here if above is None else above
+    full = Account.full(contrast_setup(findings, store, shift).setup.sources)
+    entry = store.read_meta(findings.ladders[shift, ALL])["accounts"][str(full.replace(source, "initial"))]
+    fitted = fit_from_parts(*store.read(entry["key"]))
+    time_constant = carrying_time_constant(fitted, source)
+    ties = contrast.entries["sustained_unique"].evidence.gain.nats_per_trial < findings.job.compare.min_gain
+    pushed = contrast.entries["total"].evidence.p <= findings.job.tests.level
+    sentence = None
+    if ties and pushed and above is not None:
+        trial_s = float(np.median(findings.trials.n_bins)) * findings.trials.bin_s
+        sentence = describe_mimic(source, time_constant, trial_s)
+    return sentence, time_constant if np.isfinite(time_constant) else None
+
+
+def contrast_setup(findings: Findings, store: Store, shift: int) -> Fit:
+    """The full account's fit to all trials at a shift of the size."""
+    entries = store.read_meta(findings.ladders[shift, ALL])["accounts"]
+    return fit_from_parts(*store.read(next(iter(entries.values()))["key"]))
+
+
+def _confounding(findings: Findings) -> float | None:
+    trials = findings.trials
+    return None if trials.context is None else explain_by_time(trials.context, trials.set_s)

@@ -1,0 +1,170 @@
+"""The whole job on one session: size, accounts, contrasts, decode, and what is written of them."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import replace
+
+import numpy as np
+
+from portfire.accounts import Account
+from portfire.dynamics import read_model
+from portfire.job._assemble import write_outputs
+from portfire.job._evidence import collect_contrasts
+from portfire.job._file import Job, check_job, session_name
+from portfire.job._findings import Findings
+from portfire.job._shared import write_trials
+from portfire.job._stages import ALL, Size, Sizes, Stages
+from portfire.job._workspace import Workspace
+from portfire.session import Trials, read_session
+from portfire.timing import Decoding, decode
+
+N_PARTS = 4
+
+
+def run_job(job: Job, workspace: Workspace) -> None:
+    """Do a job and write its results into the workspace's folder.
+
+    A list of sessions is done one by one, each in a folder of its own name, with a common
+    ``result.json`` that names them.
+    """
+    if len(job.sessions) == 1:
+        _run_session(job, workspace)
+        return
+    from portfire.job._several import run_several
+
+    run_several(job, workspace, _run_session)
+
+
+def _run_session(job: Job, workspace: Workspace) -> None:
+    session = read_session(job.sessions[0], columns=dict(job.columns) or None)
+    trials = session.bin(job.window.bin_s, job.window.before_set_s, job.window.min_rate_hz)
+    job = check_job(job, len(trials.unit), len(trials))
+    models = [replace(read_model(path), name=name) for path, name in zip(job.model.files, job.model.names, strict=True)]
+    progress = workspace.progress
+    progress.say(
+        f"{session_name(job.sessions[0])}: {len(trials)} trials, {len(trials.unit)} units, "
+        f"{len(trials.conditions)} conditions"
+    )
+    stages = Stages(job, workspace, trials, write_trials(workspace.data, trials), models)
+    sizes = stages.choose_sizes()
+    best = sizes.chosen[ALL]
+    progress.say(f"chosen: {models[best.model].name} with {best.latent_dim} latent dimensions")
+    present, absent = _present_sources(trials, job.compare.sources)
+    job = replace(job, compare=replace(job.compare, sources=present))
+    stages = replace(stages, job=job)
+    ladders = _run_ladders(stages, sizes)
+    decodings = _run_decode(stages, sizes)
+    describe, causal = _run_descriptions(stages, sizes)
+    not_run = [
+        f"The source {source} is not contrasted: the session has "
+        f"{'one sample interval' if source == 'interval' else 'one context'}."
+        for source in absent
+    ]
+    if not present:
+        not_run.append("No contrasts: the job names no source that this session has.")
+    if not decodings:
+        not_run.append("No decode: no trial has a response, or the job names no cutoff.")
+    warnings = [text for found in decodings for text in found.warnings]
+    findings = Findings(
+        job, trials, sizes, ladders, decodings, describe, causal, tuple(warnings), tuple(not_run)
+    )
+    contrasts = collect_contrasts(findings, workspace.store)
+    write_outputs(findings, contrasts, models, workspace)
+    for row in contrasts.rows:
+        progress.say(f"{row['source']}: {row['verdict']}")
+
+
+def _present_sources(trials: Trials, wanted: Sequence[str]) -> tuple[tuple[str, ...], tuple[str, ...]]:
+    """Sources that the session has, and wanted ones that it lacks."""
+    intervals = {interval for _, interval in trials.conditions if interval is not None}
+    has = {"interval": len(intervals) > 1, "context": len(trials.contexts) > 1, "trial": True}
+    present = tuple(source for source in Account.__dataclass_fields__ if source in wanted and has[source])
+    return present, tuple(source for source in wanted if not has[source])
+
+
+def shifted(size: Size, shift: int, n_units: int) -> Size | None:
+    """The size with one latent dimension more or fewer; None where there is no such model."""
+    d = size.latent_dim + shift
+    return replace(size, latent_dim=d) if 1 <= d <= n_units else None
+
+
+def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int], str]:
+    if not stages.job.compare.sources:
+        # The full account's held-out scores and decode still need its fits at the chosen size.
+        shifts: Iterable[int] = (0,)
+    else:
+        shifts = (0, 1, -1)
+    wanted: dict[tuple[int, int], Size] = {}
+    for shift in shifts:
+        moved = {w: shifted(sizes.chosen[w], shift, len(stages.trials.unit)) for w in (ALL, *stages.folds)}
+        if all(size is not None for size in moved.values()):
+            wanted.update({(shift, w): size for w, size in moved.items() if size is not None})
+    fits = stages.full_fits([(size, where) for (_, where), size in wanted.items()], sizes)
+    tasks = {
+        (shift, where): stages.ladder_task(size, where, fits[size, where])
+        for (shift, where), size in wanted.items()
+    }
+    stages.run(list(tasks.values()))
+    return {which: task.key for which, task in tasks.items()}
+
+
+def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
+    job, trials = stages.job, stages.trials
+    cutoffs = [c for c in job.decode.cutoffs_s if c > 0 or trials.n_before]
+    if not cutoffs or not np.isfinite(trials.produced_s).any():
+        return ()
+    best = sizes.chosen[ALL]
+    fits = stages.full_fits([(best, fold) for fold in stages.folds], sizes)
+    tasks = [
+        stages.task(
+            "infer_features", f"states without fold {fold + 1}", "states", [fits[best, fold]], cutoffs_s=cutoffs
+        )
+        for fold in stages.folds
+    ]
+    stages.run(tasks)
+    read = [stages.workspace.store.read(task.key)[1] for task in tasks]
+    found: list[Decoding] = []
+    for position, cutoff in enumerate(cutoffs):
+        stages.workspace.stop.check()
+        by_name = {
+            name: np.stack([arrays[f"{name}_{position}"] for arrays in read])
+            for name in ("initial", "sustained", "state")
+        }
+        last = trials.n_before + round(cutoff / trials.bin_s)
+        features = {"initial": by_name["initial"]}
+        if cutoff > 0:
+            features["sustained"] = by_name["sustained"]
+            features["initial+sustained"] = np.concatenate([by_name["initial"], by_name["sustained"]], axis=2)
+        features["state"] = by_name["state"]
+        features["counts"] = trials.counts[:, :last].sum(axis=1).astype(float)[None]
+        for variant in ("all", "late"):
+            found += decode(
+                features,
+                trials.produced_s,
+                trials.condition,
+                trials.index,
+                trials.n_session,
+                job.compare.folds,
+                cutoff,
+                trials.bin_s,
+                variant=variant,  # type: ignore[arg-type]
+                draws=job.decode.draws,
+                level=job.tests.level,
+                seed=job.seed,
+            )
+    return tuple(found)
+
+
+def _run_descriptions(stages: Stages, sizes: Sizes) -> tuple[str, tuple[str, ...]]:
+    best = sizes.chosen[ALL]
+    key = stages.full_fits([(best, ALL)], sizes)[best, ALL]
+    describe = stages.task("describe_fit", "states and rates", "states", [key], seed=stages.job.seed)
+    causal = [
+        stages.task(
+            "infer_causal", f"causal states, part {part + 1}", "states", [key], part=part, n_parts=N_PARTS
+        )
+        for part in range(N_PARTS)
+    ]
+    stages.run([describe, *causal])
+    return describe.key, tuple(task.key for task in causal)
