@@ -9,7 +9,8 @@ import pytest
 from portfire.accounts import Account, make_design
 from portfire.dynamics import ModelFile, initial_covariance, make_setup, parameter_shapes, path_inputs
 from portfire.simulate import Scenario, draw_session, true_parameters
-from portfire.simulate._system import carry, make_system
+from portfire.simulate._make import make_system
+from portfire.simulate._system import carry
 from portfire.simulate._system import path_inputs as drawn_inputs
 
 

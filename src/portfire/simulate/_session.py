@@ -12,8 +12,9 @@ from portfire.errors import InputError
 from portfire.session import Session
 from portfire.simulate._draw import Drawn, Mishaps, draw
 from portfire.simulate._folder import check_folder, write_folder
+from portfire.simulate._make import make_system
 from portfire.simulate._scenario import Scenario, demo_scenario, scenario_of_model
-from portfire.simulate._system import System, make_system
+from portfire.simulate._system import System
 
 if TYPE_CHECKING:
     from portfire.estimation import Fit
