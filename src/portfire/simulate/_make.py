@@ -194,7 +194,7 @@ def _draw_rates(rng: np.random.Generator, scenario: Scenario) -> np.ndarray:
     n = scenario.n_units + scenario.n_silent
     spread = scenario.rate_spread
     rates = scenario.mean_rate_hz * np.exp(spread * rng.standard_normal(n) - 0.5 * spread**2)
-    rates = np.maximum(rates, 1.0)
+    rates = np.clip(rates, min(1.0, scenario.mean_rate_hz), 5 * scenario.mean_rate_hz)
     rates[rng.permutation(n)[: scenario.n_silent]] = rng.uniform(0.1, 0.3, scenario.n_silent)
     return rates
 
