@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from ..accounts import ROUTES, Account
 from ..estimation import Fit
 
-AGREEMENT = 0.05
 _MAX_ROUNDS = 4
 
 Refit = Callable[[Account, Fit], Fit]
@@ -32,7 +31,7 @@ class Ladder:
     rounds : int
         Rounds of refitting until they agreed.
     agreed : bool
-        Whether no account is left more than 0.05 nats below one that it contains.
+        Whether no account is left by more than the agreement below one that it contains.
     """
 
     fits: dict[str, Fit]
@@ -40,7 +39,7 @@ class Ladder:
     agreed: bool
 
 
-def climb(full: Fit, accounts: Sequence[Account], refit: Refit) -> Ladder:
+def climb(full: Fit, accounts: Sequence[Account], refit: Refit, agreement: float = 0.05) -> Ladder:
     """Fit nested accounts until none is below one that it contains, and none gains from its container.
 
     Parameters
@@ -51,6 +50,8 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit) -> Ladder:
         The full one first.
     refit : callable
         ``refit(account, start)`` fits an account from another account's fit.
+    agreement : float, default 0.05
+        Nats by which a smaller account may stand above one that contains it.
 
     Returns
     -------
@@ -60,7 +61,7 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit) -> Ladder:
     for account in accounts[1:]:
         fits[str(account)] = refit(account, full)
     for n_round in range(_MAX_ROUNDS):
-        raised = _raise_containers(fits, accounts, refit)
+        raised = _raise_containers(fits, accounts, refit, agreement)
         if not raised:
             return Ladder(fits, n_round, True)
         for account in accounts:
@@ -69,10 +70,12 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit) -> Ladder:
                     again = refit(account, fits[str(larger)])
                     if again.value > fits[str(account)].value:
                         fits[str(account)] = again
-    return Ladder(fits, _MAX_ROUNDS, not _behind(fits, accounts))
+    return Ladder(fits, _MAX_ROUNDS, not _behind(fits, accounts, agreement))
 
 
-def _behind(fits: dict[str, Fit], accounts: Sequence[Account]) -> list[tuple[Account, Account]]:
+def _behind(
+    fits: dict[str, Fit], accounts: Sequence[Account], agreement: float
+) -> list[tuple[Account, Account]]:
     """Pairs of an account and a smaller one that stands higher."""
     return [
         (larger, smaller)
@@ -80,15 +83,18 @@ def _behind(fits: dict[str, Fit], accounts: Sequence[Account]) -> list[tuple[Acc
         for smaller in accounts
         if larger != smaller
         and larger.contains(smaller)
-        and fits[str(smaller)].value > fits[str(larger)].value + AGREEMENT
+        and fits[str(smaller)].value > fits[str(larger)].value + agreement
     ]
 
 
-def _raise_containers(fits: dict[str, Fit], accounts: Sequence[Account], refit: Refit) -> list[Account]:
+def _raise_containers(
+    fits: dict[str, Fit], accounts: Sequence[Account], refit: Refit, agreement: float
+) -> list[Account]:
     raised = []
     # From the smallest container up, so that a rise is handed on within one round.
-    for larger in sorted({pair[0] for pair in _behind(fits, accounts)}, key=str):
-        candidates = [fits[str(smaller)] for container, smaller in _behind(fits, accounts) if container == larger]
+    for larger in sorted({pair[0] for pair in _behind(fits, accounts, agreement)}, key=str):
+        behind = _behind(fits, accounts, agreement)
+        candidates = [fits[str(smaller)] for container, smaller in behind if container == larger]
         if not candidates:
             continue
         again = refit(larger, max(candidates, key=lambda fitted: fitted.value))

@@ -11,7 +11,7 @@ from portfire.dynamics._linear import (
 )
 from portfire.dynamics._models import find_model, shipped_models
 from portfire.dynamics._readouts import READOUTS, Curvature, Readout
-from portfire.dynamics._setup import Setup, make_setup
+from portfire.dynamics._setup import Setup, make_setup, n_drift_functions
 from portfire.dynamics._spec import ModelFile, SimulateSettings, model_from_dict, model_to_dict, read_model
 
 __all__ = [
@@ -29,6 +29,7 @@ __all__ = [
     "make_setup",
     "model_from_dict",
     "model_to_dict",
+    "n_drift_functions",
     "parameter_shapes",
     "path_inputs",
     "path_prior",

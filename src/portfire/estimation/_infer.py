@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import jax.numpy as jnp
 import numpy as np
 import xarray as xr
 
@@ -67,3 +68,30 @@ def infer_trials(fitted: Fit, trials: Trials, until_s: float | None = None) -> x
             "units": "log rate: one unit of a latent moves the log rates by its orthonormal readout column",
         },
     )
+
+
+def causal_states(fitted: Fit, trials: Trials) -> np.ndarray:
+    """State at the end of every bin after the set cue from the spikes up to there, in canonical form.
+
+    The same as `Fit.infer` at every bin, each search starting from the bin before.
+
+    Returns
+    -------
+    array, shape (trial, time, latent)
+        NaN past the end of a trial.
+    """
+    setup, before = fitted.setup, fitted.setup.n_before
+    packed = pack(trials, setup)
+    device = to_device(fitted.params)
+    states = []
+    for chunk in packed.chunks:
+        n_time = chunk.mask.shape[0]
+        path = start_path(setup, chunk)
+        state = np.full(path.x.shape, np.nan)
+        for t in range(before, n_time):
+            seen = chunk.mask * (jnp.arange(n_time)[:, None] <= t)
+            path = laplace(device, setup, chunk._replace(mask=seen, counts=chunk.counts * seen), path).mode
+            state[t] = np.asarray(path.x[t])
+        states.append(state)
+    x = packed.gather_time(states)[:, before:]
+    return np.where(trials.mask[:, before:, None], x, np.nan) @ fitted.canonical.T

@@ -19,15 +19,16 @@ from portfire.inference import (
 )
 from portfire.session import Trials
 
-N_PAIRS = 48
+N_PAIRS, MORE_PAIRS = 16, 128
+LARGEST_SE = 0.05
 LEAST_EFFECTIVE = 0.3
 
 
 def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[np.ndarray, np.ndarray]:
     """Importance-sampled log marginal likelihood and its standard error, shape (trial,) each.
 
-    Chunks in which some trial's effective sample size falls below 30 % are scored by the guided
-    particle filter instead, for those trials.
+    Trials whose standard error is above 0.05 nats get eight times the draws; those whose effective
+    sample size then falls below 30 % are scored by the guided particle filter instead.
     """
     device, setup = to_device(fitted.params), fitted.setup
 
@@ -35,8 +36,11 @@ def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[
         keys = lane_keys(fitted.seed, chunk)
         posterior = laplace(device, setup, chunk, start_path(setup, chunk))
         sampled = importance(device, setup, chunk, posterior, keys, n_pairs)
+        real = np.asarray(chunk.weight) > 0
+        if np.any((np.asarray(sampled.se) > LARGEST_SE) & real):
+            sampled = importance(device, setup, chunk, posterior, keys, MORE_PAIRS)
         loglik, se = np.array(sampled.loglik), np.array(sampled.se)
-        poor = (np.asarray(sampled.effective) < LEAST_EFFECTIVE) & (np.asarray(chunk.weight) > 0)
+        poor = (np.asarray(sampled.effective) < LEAST_EFFECTIVE) & real
         if poor.any():
             from portfire.inference import filter_particles
 

@@ -46,6 +46,22 @@ def multiply_transposed(a: jax.Array, b: jax.Array) -> jax.Array:
     return out
 
 
+def apply_over_time(a: jax.Array, b: jax.Array) -> jax.Array:
+    """A_t b for every bin, shapes (time, i, j, lane) and (j, …, lane)."""
+    out = a[:, :, 0].reshape(*a.shape[:2], *(1,) * (b.ndim - 2), a.shape[-1]) * b[0]
+    for j in range(1, a.shape[2]):
+        out = out + a[:, :, j].reshape(*a.shape[:2], *(1,) * (b.ndim - 2), a.shape[-1]) * b[j]
+    return out
+
+
+def outer_over_time(a: jax.Array, b: jax.Array) -> jax.Array:
+    """A_t B_tᵀ for every bin, shapes (time, i, k, lane) and (time, j, k, lane)."""
+    out = a[:, :, None, 0] * b[:, None, :, 0]
+    for k in range(1, a.shape[2]):
+        out = out + a[:, :, None, k] * b[:, None, :, k]
+    return out
+
+
 def cholesky(matrix: jax.Array) -> tuple[list[jax.Array], list[jax.Array]]:
     """Right-looking Cholesky: columns of L (each (D, lane)) and one over its diagonal."""
     d = matrix.shape[0]
@@ -161,9 +177,10 @@ def invert_band(factor: Factor) -> tuple[jax.Array, jax.Array]:
     def step(later: jax.Array, block: tuple[jax.Array, ...]) -> tuple[jax.Array, tuple[jax.Array, jax.Array]]:
         lower, inverse, coupling = block
         columns, roots = _unstack(lower, inverse)
-        half = solve_lower(columns, roots, identity)
-        gain = multiply_transposed(half, coupling)
-        lag = -multiply(gain, later)
+        # Barriers keep the compiler from computing a product's factors anew for each of its entries.
+        half = lax.optimization_barrier(solve_lower(columns, roots, identity))
+        gain = lax.optimization_barrier(multiply_transposed(half, coupling))
+        lag = lax.optimization_barrier(-multiply(gain, later))
         cov = multiply_transposed(half, half) - multiply(lag, gain.transpose(1, 0, 2))
         cov = 0.5 * (cov + cov.transpose(1, 0, 2))
         return cov, (cov, lag)

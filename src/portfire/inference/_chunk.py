@@ -13,7 +13,7 @@ from portfire.accounts import make_design
 from portfire.dynamics import READOUTS, Setup
 from portfire.session import Trials
 
-_LANES = (16, 32, 64, 128)
+_LANES = (16, 64)
 _LENGTH_SHARES = (0.7, 1.0)
 
 

@@ -16,7 +16,7 @@ import numpy as np
 from jax import lax
 
 from portfire.dynamics import READOUTS, Params, Setup
-from portfire.inference._chain import Factor, solve_upper, substitute_backward
+from portfire.inference._chain import Factor, apply_over_time, solve_upper, substitute_backward
 from portfire.inference._chunk import Chunk
 from portfire.inference._smoother import Posterior, log_rates
 
@@ -49,6 +49,7 @@ def lane_keys(seed: int, chunk: Chunk) -> jax.Array:
     return jax.vmap(lambda index: jax.random.fold_in(jax.random.key(seed), index))(chunk.index)
 
 
+@partial(jax.jit, static_argnames=("count",))
 def draw_deviations(posterior: Posterior, keys: jax.Array, count: int) -> tuple[jax.Array, jax.Array]:
     """Deviations from the mode, x of shape (time, D, count, lane) and e of shape (D, count, lane)."""
     n_time, d, n_lanes = posterior.mode.x.shape
@@ -57,7 +58,7 @@ def draw_deviations(posterior: Posterior, keys: jax.Array, count: int) -> tuple[
     e = solve_upper(columns, list(posterior.corner.inverse_diagonal), noise[-1])
     x = substitute_backward(Factor(*posterior.factor), noise[:-1])
     # Given e, the chain's conditional mean moves by -V e.
-    return x - jnp.einsum("tijb,jkb->tikb", posterior.border_solution, e), e
+    return x - apply_over_time(posterior.border_solution, e), e
 
 
 @partial(jax.jit, static_argnames=("setup", "n_pairs"))

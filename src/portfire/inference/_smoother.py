@@ -18,9 +18,11 @@ from jax import lax
 from portfire.dynamics import READOUTS, Params, PathPrior, Setup, path_inputs, path_prior
 from portfire.inference._chain import (
     Factor,
+    apply_over_time,
     cholesky,
     factorise,
     invert_band,
+    outer_over_time,
     solve_lower,
     solve_upper,
     substitute_backward,
@@ -235,7 +237,7 @@ def _combine(
     """Solution of the bordered system from Hxx⁻¹ g and g_e."""
     pulled = by_border - jnp.einsum("tij,tib->jb", blocks.border, chain_solution)
     e = solve_corner(corner, pulled[:, None])[:, 0]
-    return Path(chain_solution - jnp.einsum("tijb,jb->tib", border_solution, e), e)
+    return Path(chain_solution - apply_over_time(border_solution, e), e)
 
 
 class _Step(NamedTuple):
@@ -374,9 +376,9 @@ def _moments(posterior: Posterior) -> Moments:
     identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
     border = solve_corner(posterior.corner, identity)
     v = posterior.border_solution
-    cross = -jnp.einsum("tijb,jkb->tikb", v, border)
-    cov = cov - jnp.einsum("tikb,tjkb->tijb", cross, v)
-    lag = lag.at[:-1].add(-jnp.einsum("tikb,tjkb->tijb", cross[:-1], v[1:]))
+    cross = jax.lax.optimization_barrier(-apply_over_time(v, border))
+    cov = cov - outer_over_time(cross, v)
+    lag = lag.at[:-1].add(-outer_over_time(cross[:-1], v[1:]))
     return Moments(cov, lag, cross, border)
 
 

@@ -26,6 +26,7 @@ from portfire.timing import summarise_behaviour
 
 LEAST_RUNNING = 5
 N_COMPONENTS = 10
+SMOOTHING_S = 0.025
 
 
 def write_outputs(
@@ -265,13 +266,13 @@ def _rates(trials: Trials, predicted: np.ndarray) -> xr.Dataset:
 def component_shares(rates: np.ndarray, bin_s: float) -> np.ndarray:
     """Share of the variance of trial-averaged rates in each of the first ten principal components.
 
-    Rates are smoothed (Gaussian, SD 40 ms) where trials still run.
+    Rates are smoothed (Gaussian, SD 25 ms) where trials still run.
     """
     from scipy.ndimage import gaussian_filter1d
 
     seen = np.isfinite(rates).all(axis=2)
     parts = [
-        gaussian_filter1d(rates[c, seen[c]], 0.04 / bin_s, axis=0, mode="nearest")
+        gaussian_filter1d(rates[c, seen[c]], SMOOTHING_S / bin_s, axis=0, mode="nearest")
         for c in range(len(rates))
         if seen[c].any()
     ]

@@ -190,7 +190,11 @@ def _look_for_mimic(
     entry = store.read_meta(findings.ladders[shift, ALL])["accounts"][str(full.replace(source, "initial"))]
     fitted = fit_from_parts(*store.read(entry["key"]))
     time_constant = carrying_time_constant(fitted, source)
-    ties = contrast.entries["sustained_unique"].evidence.gain.nats_per_trial < findings.job.compare.min_gain
+    min_gain = findings.job.compare.min_gain
+    ties = all(
+        contrast.entries[name].evidence.gain.nats_per_trial < min_gain
+        for name in ("initial_unique", "sustained_unique")
+    )
     pushed = contrast.entries["total"].evidence.p <= findings.job.tests.level
     sentence = None
     if ties and pushed and above is not None:

@@ -102,7 +102,7 @@ def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int], str]:
             wanted.update({(shift, w): size for w, size in moved.items() if size is not None})
     fits = stages.full_fits([(size, where) for (_, where), size in wanted.items()], sizes)
     tasks = {
-        (shift, where): stages.ladder_task(size, where, fits[size, where])
+        (shift, where): stages.ladder_task(size, where, fits[size, where], shift)
         for (shift, where), size in wanted.items()
     }
     stages.run(list(tasks.values()))

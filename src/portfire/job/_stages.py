@@ -20,7 +20,8 @@ from portfire.job._workspace import Workspace
 from portfire.session import Trials
 
 ALL = -1
-SIZE_TOLERANCE, LADDER_TOLERANCE = 0.2, 0.05
+# Nats that four iterations together must gain for a search to go on.
+SIZE_TOLERANCE, LADDER_TOLERANCE, NEIGHBOUR_TOLERANCE = 0.2, 0.05, 0.3
 
 
 @dataclass(frozen=True)
@@ -228,12 +229,12 @@ class Stages:
         self.run(tasks)
         return keys
 
-    def ladder_task(self, size: Size, where: int, full: str) -> Task:
+    def ladder_task(self, size: Size, where: int, full: str, shift: int) -> Task:
         """Fit all accounts of the contrasts at one size on one training set."""
         held = [] if where == ALL else [where]
         kwargs = {
             **self._common(size, held),
-            "tolerance": LADDER_TOLERANCE,
+            "tolerance": NEIGHBOUR_TOLERANCE if shift else LADDER_TOLERANCE,
             "sources": list(self.job.compare.sources),
         }
         what = "all trials" if where == ALL else f"without fold {where + 1}"

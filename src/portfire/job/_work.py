@@ -16,6 +16,7 @@ from portfire.comparison import climb, contrast_accounts, fold_of, training_rows
 from portfire.estimation import (
     Fit,
     causal_mask,
+    causal_states,
     fit,
     fit_from_parts,
     fit_hazard,
@@ -92,7 +93,7 @@ def fit_ladder(
 
     start = read_fit(store, deps[0])
     accounts = contrast_accounts(start.setup.sources, kwargs["sources"])
-    ladder = climb(refit(accounts[0], start), accounts, refit)
+    ladder = climb(refit(accounts[0], start), accounts, refit, tolerance)
     entries = {}
     for account, fitted in ladder.fits.items():
         own = task_key(ladder=key, account=account)
@@ -134,15 +135,7 @@ def infer_causal(
     """Causal state at the end of every bin of a part of the trials."""
     trials = read_trials(data)
     rows = np.arange(len(trials))[int(kwargs["part"]) :: int(kwargs["n_parts"])]
-    part = trials[rows]
-    fitted = read_fit(store, deps[0])
-    n_time = trials.mask.shape[1] - trials.n_before
-    state = np.full((len(rows), n_time, fitted.latent_dim), np.nan)
-    for t in range(n_time):
-        live = np.flatnonzero(part.mask[:, trials.n_before + t])
-        if len(live):
-            posterior = infer_trials(fitted, part[live], (t + 1) * trials.bin_s)
-            state[live, t] = posterior["state"].to_numpy()[:, trials.n_before + t]
+    state = causal_states(read_fit(store, deps[0]), trials[rows])
     Store(store).write(key, {"part": kwargs["part"]}, {"rows": rows, "state": state})
     return {"trials": len(rows)}
 
