@@ -87,5 +87,9 @@ class Account:
             self.allows(source, h) for source in SOURCES for h in (0.0, float("inf")) if other.allows(source, h)
         )
 
+    def n_pushes(self) -> int:
+        """Number of source-route pairs that this account allows."""
+        return sum({"none": 0, "both": 2}.get(self.route(source), 1) for source in SOURCES)
+
     def __str__(self) -> str:
         return ",".join(f"{s}={getattr(self, s)}" for s in SOURCES if getattr(self, s) is not None)

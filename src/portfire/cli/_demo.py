@@ -12,7 +12,7 @@ out = "."
 seed = {seed}
 
 [compare]
-latent_dims = [2, 3, 4]
+latent_dims = [2, 3]
 
 [decode]
 cutoffs_s = [0.1, 0.2, 0.3]

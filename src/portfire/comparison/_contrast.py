@@ -36,6 +36,9 @@ class Scored:
     n_train : float
         Mean number of training trials.
     n_folds : int
+    in_sample : bool
+        Whether ``loglik`` is of the training trials themselves. A difference by k parameters is then
+        lowered by k/n, which is what it loses on new trials (Akaike 1974, from memory).
     """
 
     setup: Setup
@@ -43,6 +46,7 @@ class Scored:
     loglik: Mapping[str, NDArray[np.float64]]
     n_train: float
     n_folds: int
+    in_sample: bool = False
 
 
 @dataclass(frozen=True)
@@ -134,6 +138,8 @@ def contrast_sources(
     entries: dict[tuple[str, str], Entry] = {}
     for key, (smaller, statistic, fixed, dims, total, p_raw), p in zip(keys, raw, adjusted, strict=True):
         difference = scored.loglik[str(full)] - scored.loglik[str(smaller)]
+        if scored.in_sample:
+            difference = difference - total / scored.n_train
         gained = gain(difference, total, scored.n_train, scored.n_folds)
         entries[key] = Entry(Evidence(gained, float(p)), statistic, fixed, dims, float(p_raw), total)
     return tuple(_contrast_one(scored, full, source, entries, level, min_gain) for source in sources)

@@ -10,7 +10,7 @@ from portfire.accounts import Account
 from portfire.dynamics import Setup
 from portfire.estimation._freedom import Freedom, free_parameters, project
 from portfire.estimation._objective import Objective, Values
-from portfire.estimation._optimise import ascend
+from portfire.estimation._optimise import Curvature, ascend
 from portfire.estimation._start import start_values
 from portfire.inference import Packed, Path, pack
 from portfire.session import Trials
@@ -60,6 +60,11 @@ def _open_covariances(objective: Objective, params: Values, setup: Setup, freedo
     return params
 
 
+def _scale(curvature: Curvature, factor: float) -> Curvature:
+    """Curvature as if there had been ``factor`` times the trials."""
+    return tuple((step, {name: factor * part for name, part in change.items()}) for step, change in curvature)
+
+
 def find_maximum(
     trials: Trials,
     setup: Setup,
@@ -84,20 +89,22 @@ def find_maximum(
         In nats.
     """
     freedom = free_parameters(account, setup, drift)
+    curvature: Curvature = ()
     if start is None:
         params = project(start_values(trials, setup), freedom)
         if len(trials) >= 2 * _SUBSET_TRIALS:
             step = len(trials) // _SUBSET_TRIALS
             part = Objective(pack(trials[np.arange(0, len(trials), step)], setup), setup)
-            params = ascend(part, params, setup, freedom, 0.5, max_iterations).params
+            climbed = ascend(part, params, setup, freedom, 0.5, max_iterations)
+            params = climbed.params
             part.close()
+            curvature = _scale(climbed.curvature, len(trials) / part.packed.n_trials)
     else:
         params = project(start, freedom)
     packed = pack(trials, setup)
     objective = Objective(packed, setup)
     params = _open_covariances(objective, params, setup, freedom)
-    ascent = ascend(objective, params, setup, freedom, tolerance, max_iterations)
-    objective(ascent.params)
+    ascent = ascend(objective, params, setup, freedom, tolerance, max_iterations, curvature)
     objective.close()
     status = "unconverged paths" if objective.n_unconverged else ascent.status
     return Maximum(ascent.params, ascent.value, ascent.trace, status, packed, objective.paths)

@@ -1,19 +1,25 @@
-"""Quasi-Newton ascent (L-BFGS: Liu and Nocedal 1989) in scaled coordinates."""
+"""Quasi-Newton ascent (L-BFGS: Liu and Nocedal 1989, Math. Program. 45:503) in scaled coordinates.
+
+Curvature that one ascent has seen is handed to the next: nested accounts share most of their Hessian.
+"""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import minimize
 
 from portfire.dynamics import Setup
 from portfire.estimation._freedom import Freedom
 from portfire.estimation._objective import Objective, Values
-from portfire.estimation._scaling import make_scaling
+from portfire.estimation._scaling import Scaling, make_scaling
 
-_MEMORY = 30
+MEMORY = 60
 _LOOK_BACK = 4
+_ARMIJO = 1e-4
+_MAX_HALVINGS = 12
+
+Curvature = tuple[tuple[Values, Values], ...]
 
 
 @dataclass(frozen=True)
@@ -28,15 +34,46 @@ class Ascent:
     trace : tuple of float
         Objective after every iteration.
     status : {"converged", "iterations"}
-    gradient : dict of arrays
-        At the end.
+    curvature : tuple of pairs
+        Steps and changes of the gradient (of minus the objective), by parameter.
     """
 
     params: Values
     value: float
     trace: tuple[float, ...]
     status: str
-    gradient: Values
+    curvature: Curvature
+
+
+class _Memory:
+    """Pairs of steps and gradient changes in flat coordinates, newest last."""
+
+    def __init__(self, pairs: list[tuple[np.ndarray, np.ndarray]]) -> None:
+        self.pairs: list[tuple[np.ndarray, np.ndarray]] = []
+        for step, change in pairs:
+            self.add(step, change)
+
+    def add(self, step: np.ndarray, change: np.ndarray) -> bool:
+        """Keep a pair whose curvature is positive."""
+        if step @ change <= 1e-8 * np.linalg.norm(step) * np.linalg.norm(change):
+            return False
+        self.pairs = [*self.pairs, (step, change)][-MEMORY:]
+        return True
+
+    def solve(self, gradient: np.ndarray) -> np.ndarray:
+        """Inverse Hessian times a vector (two-loop recursion)."""
+        q, kept = gradient.copy(), []
+        for step, change in reversed(self.pairs):
+            rho = 1.0 / (step @ change)
+            alpha = rho * (step @ q)
+            q -= alpha * change
+            kept.append((rho, alpha))
+        if self.pairs:
+            step, change = self.pairs[-1]
+            q *= (step @ change) / (change @ change)
+        for (step, change), (rho, alpha) in zip(self.pairs, reversed(kept), strict=True):
+            q += (alpha - rho * (change @ q)) * step
+        return q
 
 
 def ascend(
@@ -46,41 +83,74 @@ def ascend(
     freedom: Freedom,
     tolerance: float,
     max_iterations: int,
+    curvature: Curvature = (),
 ) -> Ascent:
     """Maximise the objective from ``params`` over what is free.
 
     Stops when the last four iterations together gained less than ``tolerance`` nats.
+
+    Parameters
+    ----------
+    curvature : tuple of pairs, optional
+        From an earlier ascent in the same coordinates of the latent space.
     """
+    value, gradient = objective(params)
     packed = objective.packed
-    objective(params)
     n_chunks = min(len(packed.chunks), 3)
     share = sum(len(rows) for rows in packed.members[:n_chunks]) / packed.n_trials
     scaling = make_scaling(params, setup, freedom, packed, objective.last[:n_chunks], share)
-    best: dict[str, object] = {"value": -np.inf, "params": params, "gradient": None}
-    trace: list[float] = []
-
-    def negative(flat: np.ndarray) -> tuple[float, np.ndarray]:
-        moved = scaling.parameters(flat)
-        value, gradient = objective(moved)
-        slope = scaling.pull_back(gradient)
-        if not np.isfinite(value) or not np.all(np.isfinite(slope)):
-            return 1e15, np.zeros_like(flat)
-        if value > best["value"]:  # type: ignore[operator]
-            best.update(value=value, params=moved, gradient=gradient)
-        return -value, -slope
-
-    def watch(intermediate_result) -> None:  # type: ignore[no-untyped-def]
-        trace.append(-float(intermediate_result.fun))
+    memory = _Memory([(scaling.push(step), scaling.pull_back(change)) for step, change in curvature])
+    flat = np.zeros(scaling.size)
+    slope = -scaling.pull_back(gradient)
+    trace = [value]
+    seen: list[tuple[Values, Values]] = list(curvature)
+    status = "iterations"
+    for _ in range(max_iterations):
+        moved = _search(objective, scaling, flat, value, slope, -memory.solve(slope))
+        if moved is None and memory.pairs:
+            # Old curvature may mislead; a step in the scaled coordinates themselves is safe.
+            memory = _Memory([])
+            moved = _search(objective, scaling, flat, value, slope, -slope)
+        if moved is None:
+            status = "converged"
+            break
+        new_flat, new_value, new_params, new_gradient = moved
+        new_slope = -scaling.pull_back(new_gradient)
+        if memory.add(new_flat - flat, new_slope - slope):
+            change = {name: gradient[name] - new_gradient[name] for name in gradient}
+            seen.append(({name: new_params[name] - params[name] for name in params}, change))
+        flat, value, slope, params, gradient = new_flat, new_value, new_slope, new_params, new_gradient
+        trace.append(value)
         if len(trace) > _LOOK_BACK and trace[-1] - trace[-1 - _LOOK_BACK] < tolerance:
-            raise StopIteration
+            status = "converged"
+            break
+    return Ascent(params, value, tuple(trace), status, tuple(seen[-MEMORY:]))
 
-    minimize(
-        negative,
-        np.zeros(scaling.size),
-        jac=True,
-        method="L-BFGS-B",
-        callback=watch,
-        options={"maxcor": _MEMORY, "maxiter": max_iterations, "ftol": 0.0, "gtol": 1e-6, "maxls": 30},
-    )
-    status = "iterations" if len(trace) >= max_iterations else "converged"
-    return Ascent(best["params"], best["value"], tuple(trace), status, best["gradient"])  # type: ignore[arg-type]
+
+def _search(
+    objective: Objective,
+    scaling: Scaling,
+    flat: np.ndarray,
+    value: float,
+    slope: np.ndarray,
+    direction: np.ndarray,
+) -> tuple[np.ndarray, float, Values, Values] | None:
+    """A step along a direction that raises the objective enough; None where there is none."""
+    descent = float(slope @ direction)
+    if not np.isfinite(descent) or descent >= 0:
+        return None
+    length = 1.0
+    for _ in range(_MAX_HALVINGS):
+        trial = flat + length * direction
+        params = scaling.parameters(trial)
+        new_value, gradient = objective(params)
+        finite = np.isfinite(new_value) and all(np.all(np.isfinite(part)) for part in gradient.values())
+        if finite and new_value >= value - _ARMIJO * length * descent:
+            return trial, new_value, params, gradient
+        if finite:
+            # Minimum of the parabola through both values and the first slope, kept within bounds.
+            fitted = -0.5 * descent * length**2 / (value - new_value - descent * length)
+            length = float(np.clip(fitted, 0.1 * length, 0.5 * length))
+        else:
+            length *= 0.2
+    return None

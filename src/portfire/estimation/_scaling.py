@@ -108,21 +108,36 @@ class Scaling:
             out[name] = out[name] + scale * parts[name]
         return out
 
+    def push(self, step: dict[str, np.ndarray]) -> np.ndarray:
+        """Flat vector of a step in the parameters; what is not free is dropped."""
+        free = self.freedom
+        blocks = [step["readout"], step["log_rate"][:, None]]
+        units = np.concatenate([*blocks, step["drift"]] if free.drift else blocks, axis=1)
+        pieces = [(self.units.transpose(0, 2, 1) @ units[:, :, None]).ravel()]
+        rows = self._rows(step)
+        pieces.append((rows @ self.steps).ravel())
+        if len(free.prompt):
+            pieces.append((self.prompt_left.T @ step["push"][:, free.prompt] @ self.prompt_right).ravel())
+        if free.initial_factor:
+            pieces.append(np.linalg.solve(self.initial, step["initial_factor"]).ravel())
+        if free.sustained_factor:
+            pieces.append(np.linalg.solve(self.sustained, step["sustained_factor"]).ravel())
+        pieces += [np.ravel(step[name] / scale) for name, scale in self.scalars.items()]
+        return np.concatenate(pieces)
+
+    def _rows(self, values: dict[str, np.ndarray]) -> np.ndarray:
+        return np.concatenate(
+            [values["transition"], values["offset"][:, None], values["cue"], values["push"][:, self.freedom.lasting]],
+            axis=1,
+        )
+
     def pull_back(self, gradient: dict[str, np.ndarray]) -> np.ndarray:
         """Gradient by the flat vector from the gradient by the parameters."""
         free = self.freedom
         blocks = [gradient["readout"], gradient["log_rate"][:, None]]
         units = np.concatenate([*blocks, gradient["drift"]] if free.drift else blocks, axis=1)
         pieces = [np.linalg.solve(self.units, units[:, :, None]).ravel()]
-        rows = np.concatenate(
-            [
-                gradient["transition"],
-                gradient["offset"][:, None],
-                gradient["cue"],
-                gradient["push"][:, free.lasting],
-            ],
-            axis=1,
-        )
+        rows = self._rows(gradient)
         pieces.append(solve_triangular(self.steps, rows.T, lower=True).T.ravel())
         if len(free.prompt):
             left = solve_triangular(self.prompt_left, gradient["push"][:, free.prompt], lower=True)

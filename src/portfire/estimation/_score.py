@@ -15,13 +15,13 @@ from portfire.inference import (
     lane_keys,
     laplace,
     pack,
+    refine,
     start_path,
 )
 from portfire.session import Trials
 
 N_PAIRS, MORE_PAIRS = 16, 128
 LARGEST_SE = 0.05
-LEAST_EFFECTIVE = 0.3
 
 
 def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[np.ndarray, np.ndarray]:
@@ -39,14 +39,8 @@ def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[
         real = np.asarray(chunk.weight) > 0
         if np.any((np.asarray(sampled.se) > LARGEST_SE) & real):
             sampled = importance(device, setup, chunk, posterior, keys, MORE_PAIRS)
-        loglik, se = np.array(sampled.loglik), np.array(sampled.se)
-        poor = (np.asarray(sampled.effective) < LEAST_EFFECTIVE) & real
-        if poor.any():
-            from portfire.inference import filter_particles
-
-            filtered = filter_particles(device, setup, chunk, posterior, keys)
-            loglik[poor], se[poor] = np.asarray(filtered.loglik)[poor], np.asarray(filtered.se)[poor]
-        return loglik, se
+        sampled, _ = refine(device, setup, chunk, posterior, keys, sampled)
+        return np.asarray(sampled.loglik), np.asarray(sampled.se)
 
     with ThreadPoolExecutor(n_threads()) as pool:
         results = list(pool.map(one, packed.chunks))

@@ -14,7 +14,8 @@ from portfire.dynamics import READOUTS, Setup
 from portfire.session import Trials
 
 _LANES = (16, 64)
-_LENGTH_SHARES = (0.7, 1.0)
+# Short sessions are padded to one length: compiling for a second would cost more than it saves.
+_LENGTH_SHARES, _FEW_TRIALS = (0.7, 1.0), 400
 
 
 class Chunk(NamedTuple):
@@ -103,7 +104,8 @@ def pack(trials: Trials, setup: Setup, mask: np.ndarray | None = None) -> Packed
     lanes = _round_up(min(len(trials), _LANES[-1]), _LANES)
     # Lengths hang on the session's longest trial, so that parts of a session share compiled code.
     longest = trials.counts.shape[1] - setup.n_before
-    lengths = tuple(max(2, int(np.ceil(share * longest))) for share in _LENGTH_SHARES)
+    shares = _LENGTH_SHARES if trials.n_session > _FEW_TRIALS else (1.0,)
+    lengths = tuple(max(2, int(np.ceil(share * longest))) for share in shares)
     chunks, members = [], []
     for part in _cut(order, lanes):
         n_time = setup.n_before + _round_up(max(2, int(ends[part].max()) - setup.n_before), lengths)

@@ -20,8 +20,6 @@ from portfire.inference._chain import Factor, apply_over_time, solve_upper, subs
 from portfire.inference._chunk import Chunk
 from portfire.inference._smoother import Posterior, log_rates
 
-PAIRS_A_ROUND = 4
-
 
 class Sampled(NamedTuple):
     """Importance-sampled log marginal likelihood of every lane.
@@ -73,7 +71,7 @@ def importance(
         From `laplace` with the same parameters.
     keys : array of keys, shape (lane,)
     n_pairs : int
-        Mirrored pairs of draws, rounded up to whole rounds of four.
+        Mirrored pairs of draws.
     """
     readout = READOUTS[setup.model.readout]
     n_time, d, n_lanes = posterior.mode.x.shape
@@ -84,21 +82,20 @@ def importance(
     c = params["readout"].astype(single)
     low = {name: value.astype(single) for name, value in params.items()}
 
-    def one_round(carry: None, step: jax.Array) -> tuple[None, jax.Array]:
+    def one_pair(carry: None, step: jax.Array) -> tuple[None, jax.Array]:
         inner = jax.vmap(lambda key: jax.random.fold_in(key, step))(keys)
-        x, e = draw_deviations(posterior, inner, PAIRS_A_ROUND)
-        tilt = jnp.einsum("tib,tikb->kb", posterior.slack.x, x) + jnp.einsum("ib,ikb->kb", posterior.slack.e, e)
-        logs = []
-        for k in range(PAIRS_A_ROUND):
-            flat = x[:, :, k].transpose(1, 0, 2).reshape(d, -1).astype(single)
-            change = (c @ flat).reshape(-1, n_time, n_lanes)
-            for sign in (1.0, -1.0):
-                beyond = readout.remainder(low, eta_low, sign * change, setup.bin_s) * mask
-                logs.append(jnp.sum(beyond, axis=(0, 1)).astype(jnp.float64) + sign * tilt[k])
+        x, e = draw_deviations(posterior, inner, 1)
+        tilt = jnp.sum(posterior.slack.x * x[:, :, 0], axis=(0, 1)) + jnp.sum(posterior.slack.e * e[:, 0], axis=0)
+        flat = x[:, :, 0].transpose(1, 0, 2).reshape(d, -1).astype(single)
+        change = (c @ flat).reshape(-1, n_time, n_lanes)
+        logs = [
+            jnp.sum(readout.remainder(low, eta_low, sign * change, setup.bin_s) * mask, axis=(0, 1)).astype(jnp.float64)
+            + sign * tilt
+            for sign in (1.0, -1.0)
+        ]
         return None, jnp.stack(logs)
 
-    rounds = -(-n_pairs // PAIRS_A_ROUND)
-    logs = lax.scan(one_round, None, jnp.arange(rounds))[1].reshape(rounds * PAIRS_A_ROUND, 2, n_lanes)
+    logs = lax.scan(one_pair, None, jnp.arange(n_pairs))[1]
     top = jnp.max(logs, axis=(0, 1))
     weights = jnp.exp(logs - top)
     mean = jnp.mean(weights, axis=(0, 1))

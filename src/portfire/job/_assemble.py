@@ -123,7 +123,6 @@ def _other_models(findings: Findings, store: Store) -> list[pd.DataFrame]:
                     "loglik_se": values[1],
                     "n_spikes": trials.counts[:, trials.n_before :].sum(axis=(1, 2)).astype(int),
                     "n_bins": np.asarray(trials.n_bins).astype(int),
-                    "size_shift": 0,
                 }
             )
         )
@@ -159,10 +158,9 @@ def _account_rows(
 ) -> list[dict[str, Any]]:
     trials = findings.trials
     null = pd.Series(null_loglik(trials, findings.job.compare.folds), index=list(trials.trial))
-    chosen = evidence.scores[evidence.scores["size_shift"] == 0]
     dims = {findings.job.model.names[findings.sizes.chosen[ALL].model]: findings.sizes.chosen[ALL].latent_dim}
     rows = []
-    for table in (chosen, *others):
+    for table in (evidence.scores, *others):
         for (account, model), group in table.groupby(["account", "model"], sort=False):
             above = group["loglik"].to_numpy() - null.loc[list(group["trial"])].to_numpy()
             spikes = int(group["n_spikes"].sum())

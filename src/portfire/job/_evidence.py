@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from portfire.accounts import Account
+from portfire.accounts import SOURCES, Account
 from portfire.comparison import (
     Contrast,
     Scored,
@@ -19,7 +19,7 @@ from portfire.comparison import (
     overrule,
     reconcile,
 )
-from portfire.estimation import Fit, fit_from_parts
+from portfire.estimation import fit_from_parts
 from portfire.job._findings import Findings
 from portfire.job._stages import ALL
 from portfire.job._store import Store
@@ -50,39 +50,54 @@ class Evidences:
 
 def collect_contrasts(findings: Findings, store: Store) -> Evidences:
     """Contrast every source at the chosen size, set beside one dimension fewer and more."""
-    shifts = sorted({shift for shift, _ in findings.ladders}, key=abs)
-    scored, tables, n_train, warnings = {}, [], 0.0, []
-    for shift in shifts:
-        scored[shift], table, mean_train, more = _score_shift(findings, store, shift)
-        tables.append(table)
+    scored, scores, n_train, warnings = _score_held_out(findings, store)
+    by_shift = {0: scored}
+    for shift in sorted({shift for shift, _, _ in findings.ladders} - {0}):
+        by_shift[shift], more = _score_in_sample(findings, store, shift)
         warnings += more
-        if shift == 0:
-            n_train = mean_train
     sources = findings.job.compare.sources
     level, min_gain = findings.job.tests.level, findings.job.compare.min_gain
     rows: list[dict[str, Any]] = []
     if sources:
-        by_shift = {
+        contrasts = {
             shift: {c.source: c for c in contrast_sources(s, sources, level, min_gain)}
-            for shift, s in scored.items()
+            for shift, s in by_shift.items()
         }
         for source in sources:
-            rows.append(_row(findings, store, source, {s: found[source] for s, found in by_shift.items()}))
-    return Evidences(tuple(rows), pd.concat(tables, ignore_index=True), n_train, tuple(warnings))
+            rows.append(_row(findings, store, source, {s: found[source] for s, found in contrasts.items()}))
+    return Evidences(tuple(rows), scores, n_train, tuple(warnings))
 
 
-def _score_shift(
-    findings: Findings, store: Store, shift: int
-) -> tuple[Scored, pd.DataFrame, float, list[str]]:
+def _score_in_sample(findings: Findings, store: Store, shift: int) -> tuple[Scored, list[str]]:
+    """Accounts one dimension away, fitted to all trials and scored on them."""
+    values: dict[str, float] = {}
+    loglik: dict[str, np.ndarray] = {}
+    setup, n_train, warnings = None, 0.0, []
+    for source in findings.job.compare.sources:
+        ladder = store.read_meta(findings.ladders[shift, ALL, source])
+        warnings += _complaints(ladder, f"on all trials, for {source}")
+        n_train = float(ladder["n_train"])
+        for account, entry in ladder["accounts"].items():
+            # The full account stands in every source's ladder; the highest of its fits counts.
+            if entry["value"] > values.get(account, -np.inf):
+                content, arrays = store.read(entry["key"])
+                values[account], loglik[account] = float(entry["value"]), arrays["loglik"]
+                setup = setup or fit_from_parts(content, arrays).setup
+    assert setup is not None
+    return Scored(setup, values, loglik, n_train, findings.job.compare.folds, in_sample=True), warnings
+
+
+def _score_held_out(findings: Findings, store: Store) -> tuple[Scored, pd.DataFrame, float, list[str]]:
+    """Accounts at the chosen size, each trial scored by the fold that held it out."""
     trials, folds = findings.trials, findings.job.compare.folds
-    whole = store.read_meta(findings.ladders[shift, ALL])
+    whole = store.read_meta(findings.ladders[0, ALL, ""])
     accounts = list(whole["accounts"])
     loglik = {account: np.full(len(trials), np.nan) for account in accounts}
     frames, n_train, warnings = [], [], []
     before = trials.n_before
     n_spikes = trials.counts[:, before:].sum(axis=(1, 2)).astype(int)
     for fold in range(folds):
-        ladder = store.read_meta(findings.ladders[shift, fold])
+        ladder = store.read_meta(findings.ladders[0, fold, ""])
         n_train.append(ladder["n_train"])
         size = findings.sizes.chosen[fold]
         for account in accounts:
@@ -101,7 +116,6 @@ def _score_shift(
                         "loglik_se": arrays["loglik_se"],
                         "n_spikes": n_spikes[rows],
                         "n_bins": np.asarray(trials.n_bins)[rows].astype(int),
-                        "size_shift": shift,
                     }
                 )
             )
@@ -186,9 +200,10 @@ def _look_for_mimic(
     """Where the accounts tie at one dimension more: the mode that carries the initial-only separation."""
     shift = 0 if above is None else 1
     contrast = here if above is None else above
-    full = Account.full(contrast_setup(findings, store, shift).setup.sources)
-    entry = store.read_meta(findings.ladders[shift, ALL])["accounts"][str(full.replace(source, "initial"))]
-    fitted = fit_from_parts(*store.read(entry["key"]))
+    ladder = findings.ladders[shift, ALL, source if shift else ""]
+    accounts = store.read_meta(ladder)["accounts"]
+    present = Account.parse(next(iter(accounts)))
+    fitted = fit_from_parts(*store.read(accounts[_with_route(present, source)]["key"]))
     time_constant = carrying_time_constant(fitted, source)
     min_gain = findings.job.compare.min_gain
     ties = all(
@@ -203,10 +218,10 @@ def _look_for_mimic(
     return sentence, time_constant if np.isfinite(time_constant) else None
 
 
-def contrast_setup(findings: Findings, store: Store, shift: int) -> Fit:
-    """The full account's fit to all trials at a shift of the size."""
-    entries = store.read_meta(findings.ladders[shift, ALL])["accounts"]
-    return fit_from_parts(*store.read(next(iter(entries.values()))["key"]))
+def _with_route(full: Account, source: str) -> str:
+    """The written form of the full account with this source by the initial route only."""
+    present = tuple(name for name in SOURCES if full.route(name) == "both")
+    return str(full.restrict(present).replace(source, "initial"))
 
 
 def _confounding(findings: Findings) -> float | None:

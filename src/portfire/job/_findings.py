@@ -20,8 +20,8 @@ class Findings:
         With its defaults settled.
     trials : Trials
     sizes : Sizes
-    ladders : dict of (int, int) to str
-        Key of the ladder entry by shift of the size (-1, 0, 1) and training set.
+    ladders : dict of (int, int, str) to str
+        Key of the ladder entry by shift of the size (-1, 0, 1), training set and source (empty: all).
     decodings : tuple of Decoding
     describe, causal : str, tuple of str
         Keys of the described fit and of the causal states.
@@ -31,7 +31,7 @@ class Findings:
     job: Job
     trials: Trials
     sizes: Sizes
-    ladders: dict[tuple[int, int], str]
+    ladders: dict[tuple[int, int, str], str]
     decodings: tuple[Decoding, ...]
     describe: str
     causal: tuple[str, ...]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -89,23 +89,22 @@ def shifted(size: Size, shift: int, n_units: int) -> Size | None:
     return replace(size, latent_dim=d) if 1 <= d <= n_units else None
 
 
-def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int], str]:
-    if not stages.job.compare.sources:
-        # The full account's held-out scores and decode still need its fits at the chosen size.
-        shifts: Iterable[int] = (0,)
-    else:
-        shifts = (0, 1, -1)
-    wanted: dict[tuple[int, int], Size] = {}
-    for shift in shifts:
-        moved = {w: shifted(sizes.chosen[w], shift, len(stages.trials.unit)) for w in (ALL, *stages.folds)}
-        if all(size is not None for size in moved.values()):
-            wanted.update({(shift, w): size for w, size in moved.items() if size is not None})
-    fits = stages.full_fits([(size, where) for (_, where), size in wanted.items()], sizes)
+def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str]:
+    # Held out at the chosen size; one dimension fewer and more on all trials only, source by source.
+    sources = stages.job.compare.sources
+    wanted = {(0, where, ""): sizes.chosen[where] for where in (ALL, *stages.folds)}
+    for shift in (1, -1):
+        moved = shifted(sizes.chosen[ALL], shift, len(stages.trials.unit))
+        if moved is not None:
+            wanted.update({(shift, ALL, source): moved for source in sources})
+    fits = stages.full_fits([(size, where) for (_, where, _), size in wanted.items()], sizes)
     tasks = {
-        (shift, where): stages.ladder_task(size, where, fits[size, where], shift)
-        for (shift, where), size in wanted.items()
+        (shift, where, source): stages.ladder_task(
+            size, where, fits[size, where], [source] if source else sources, shift != 0
+        )
+        for (shift, where, source), size in wanted.items()
     }
-    stages.run(list(tasks.values()))
+    stages.run(sorted(tasks.values(), key=lambda task: -task.kwargs["latent_dim"]))
     return {which: task.key for which, task in tasks.items()}
 
 

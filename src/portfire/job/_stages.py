@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from itertools import combinations
 from pathlib import Path
 from typing import Any
 
@@ -20,8 +19,9 @@ from portfire.job._workspace import Workspace
 from portfire.session import Trials
 
 ALL = -1
-# Nats that four iterations together must gain for a search to go on.
-SIZE_TOLERANCE, LADDER_TOLERANCE, NEIGHBOUR_TOLERANCE = 0.2, 0.05, 0.3
+# Nats that four iterations together must gain for a search to go on: a size is chosen on differences of
+# hundredths of a nat a held-out trial, a likelihood ratio on tenths of a nat in all.
+SIZE_TOLERANCE, HELD_OUT_TOLERANCE, ALL_TOLERANCE = 1.0, 0.3, 0.1
 
 
 @dataclass(frozen=True)
@@ -115,7 +115,9 @@ class Stages:
     def inner_tasks(self, size: Size, deps: dict[tuple, str]) -> dict[tuple, Task]:
         """Fits inside training sets, by what they hold out; one serves both folds that it holds out."""
         if len(self.folds) > 2:
-            pairs = [(pair, None) for pair in combinations(self.folds, 2)]
+            # Each fold is held out together with the next: its training set is split twice.
+            n = len(self.folds)
+            pairs = [(tuple(sorted((fold, (fold + 1) % n))), None) for fold in self.folds]
         else:
             pairs = [((fold,), part) for fold in self.folds for part in (0, 1)]
         return {
@@ -229,14 +231,21 @@ class Stages:
         self.run(tasks)
         return keys
 
-    def ladder_task(self, size: Size, where: int, full: str, shift: int) -> Task:
-        """Fit all accounts of the contrasts at one size on one training set."""
+    def ladder_task(
+        self, size: Size, where: int, full: str, sources: Sequence[str], scored: bool
+    ) -> Task:
+        """Fit all accounts of the contrasts at one size on one training set.
+
+        ``scored`` asks for the scores of the training trials themselves, where none are held out.
+        """
         held = [] if where == ALL else [where]
         kwargs = {
             **self._common(size, held),
-            "tolerance": NEIGHBOUR_TOLERANCE if shift else LADDER_TOLERANCE,
-            "sources": list(self.job.compare.sources),
+            "tolerance": ALL_TOLERANCE if where == ALL else HELD_OUT_TOLERANCE,
+            "sources": list(sources),
+            "score_training": scored,
         }
         what = "all trials" if where == ALL else f"without fold {where + 1}"
-        name = f"accounts at {size.latent_dim} latent dimensions, {what}"
+        only = f" for {sources[0]}" if len(sources) == 1 else ""
+        name = f"accounts{only} at {size.latent_dim} latent dimensions, {what}"
         return self.task("fit_ladder", name, "accounts", [full], **kwargs)

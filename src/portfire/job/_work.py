@@ -91,6 +91,8 @@ def fit_ladder(
     def refit(account: Account, start: Fit) -> Fit:
         return fit(train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance)
 
+    if kwargs["score_training"]:
+        test = np.arange(len(trials))
     start = read_fit(store, deps[0])
     accounts = contrast_accounts(start.setup.sources, kwargs["sources"])
     ladder = climb(refit(accounts[0], start), accounts, refit, tolerance)
