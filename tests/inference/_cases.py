@@ -43,7 +43,7 @@ def make_chunk(
     readout: str = "poisson",
     bin_s: float = 1.0,
 ) -> Chunk:
-    """A chunk of lanes from counts (unit, time, lane); every lane is a trial of its own index."""
+    """A chunk of lanes from counts (unit, time, lane); every lane is a trial at its own place."""
     _, n_time, n_lanes = counts.shape
     mask = np.ones((n_time, n_lanes)) if mask is None else np.asarray(mask, dtype=float)
     counts = counts * mask

@@ -49,7 +49,9 @@ class Account:
         for part in filter(None, (piece.strip() for piece in text.split(","))):
             source, equals, route = (piece.strip() for piece in part.partition("="))
             if not equals:
-                raise InputError(f"account {text!r}: {part!r} should read source=route, as in context=initial.")
+                raise InputError(
+                    f"account {text!r}: {part!r} should read source=route, as in context=initial."
+                )
             if source not in SOURCES:
                 raise _reject(source, "source", SOURCES, text)
             if source in routes:
@@ -84,7 +86,10 @@ class Account:
     def contains(self, other: Account) -> bool:
         """Whether every push that ``other`` allows is allowed here too (nesting)."""
         return all(
-            self.allows(source, h) for source in SOURCES for h in (0.0, float("inf")) if other.allows(source, h)
+            self.allows(source, h)
+            for source in SOURCES
+            for h in (0.0, float("inf"))
+            if other.allows(source, h)
         )
 
     def n_pushes(self) -> int:

@@ -97,7 +97,9 @@ def _count(full: Account, smaller: Account, source: str, setup: Setup) -> tuple[
     """Fixed effects, covariance sizes and parameters that the smaller account lacks."""
     fixed, dims, total = 0, [], 0
     for persistence in _PERSISTENCES.values():
-        lost = count_route(full, source, persistence, setup) - count_route(smaller, source, persistence, setup)
+        lost = count_route(full, source, persistence, setup) - count_route(
+            smaller, source, persistence, setup
+        )
         total += lost
         if lost and source == "trial":
             dims.append(setup.latent_dim)
@@ -155,8 +157,15 @@ def _contrast_one(
 ) -> Contrast:
     by_route = {route: str(full.replace(source, route)) for route in ROUTES}
     mine = {name: entries[source, name] for name in _TAKEN}
-    evidence = [mine[name].evidence for name in _TAKEN]
-    verdict = judge(source, *evidence, len(scored.loglik[str(full)]), level, min_gain)
+    verdict = judge(
+        source,
+        mine["initial_unique"].evidence,
+        mine["sustained_unique"].evidence,
+        mine["total"].evidence,
+        len(scored.loglik[str(full)]),
+        level,
+        min_gain,
+    )
     return Contrast(
         source,
         {route: float(scored.loglik[name].mean()) for route, name in by_route.items()},

@@ -48,13 +48,13 @@ def choose_smallest(loglik: Sequence[NDArray[np.float64]], min_gain: float) -> C
         If there is no candidate, or the candidates were scored on different numbers of trials.
     """
     if not loglik or len({len(values) for values in loglik}) != 1 or len(loglik[0]) < 2:
-        raise PortfireError("a choice of size needs candidates that are all scored on the same two or more trials")
+        raise PortfireError(
+            "a choice of size needs candidates that are all scored on the same two or more trials"
+        )
     table = np.asarray(loglik, dtype=float)
     best = int(np.argmax(table.mean(axis=1)))
     behind = table[best] - table
-    deficits = tuple(
-        Deficit(float(row.mean()), float(row.std(ddof=1) / np.sqrt(len(row)))) for row in behind
-    )
+    deficits = tuple(Deficit(float(row.mean()), float(row.std(ddof=1) / np.sqrt(len(row)))) for row in behind)
     for position, deficit in enumerate(deficits):
         small = deficit.nats_per_trial < deficit.se and deficit.nats_per_trial < min_gain
         if position == best or small:

@@ -88,7 +88,8 @@ def say_either(source: str, total: Evidence, min_gain: float, n_trials: int | No
     why = (
         "either route can stand in for the other, and both together"
         if total.gain.ci95[0] >= min_gain
-        else f"neither route is needed beside the other, and whether both are worth {min_gain:g} is open: they"
+        else f"neither route is needed beside the other, and whether both are worth {min_gain:g} is open: "
+        "they"
     )
     return f"{AMONG[source]}, these data cannot tell: {why} gain {say_gain(total)}{say_trials(n_trials)}."
 

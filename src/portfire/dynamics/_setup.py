@@ -64,7 +64,7 @@ class Setup:
         return cue_basis(self.model.n_bumps, self.model.cue_duration_s, self.bin_s, n_time)
 
     def drift_basis(self, trials: Trials) -> np.ndarray:
-        """Drift basis of these trials, shape (trial, basis), scaled so that coefficients have unit prior SD."""
+        """Drift basis of these trials, shape (trial, basis); coefficients have unit prior SD."""
         if self.n_drift == 0:
             return np.zeros((len(trials), 0))
         first, last = trials.session_span
@@ -80,7 +80,8 @@ class Setup:
             "n_before": self.n_before,
             "n_reference": self.n_reference,
             "columns": [
-                [c.source, c.level, None if np.isinf(c.persistence_s) else c.persistence_s] for c in self.columns
+                [c.source, c.level, None if np.isinf(c.persistence_s) else c.persistence_s]
+                for c in self.columns
             ],
             "sources": list(self.sources),
             "n_drift": self.n_drift,
@@ -116,7 +117,9 @@ def _drift_basis(time: np.ndarray, n_functions: int, timescale: float) -> np.nda
     return np.linalg.solve(factor, kernel(grid, time)).T
 
 
-def make_setup(trials: Trials, model: ModelFile, latent_dim: int, drift: bool, n_reference: int | None = None) -> Setup:
+def make_setup(
+    trials: Trials, model: ModelFile, latent_dim: int, drift: bool, n_reference: int | None = None
+) -> Setup:
     """The fixed part of a model for these trials.
 
     ``n_reference`` defaults to the median number of scored bins of ``trials``; give the session's

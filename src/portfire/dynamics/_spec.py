@@ -102,9 +102,13 @@ def _check(where: str, table: str, key: str, value: Any) -> Any:
         default = getattr(SimulateSettings(), key)
         if isinstance(default, tuple):
             if not isinstance(value, list) or not value or any(type(v) is not type(value[0]) for v in value):
-                raise InputError(f"{where}: [simulate] {key} = {value!r} should be a list, as {list(default)!r}.")
+                raise InputError(
+                    f"{where}: [simulate] {key} = {value!r} should be a list, as {list(default)!r}."
+                )
             return tuple(float(v) if isinstance(default[0], float) else v for v in value)
-        if isinstance(default, int | float) and (isinstance(value, bool) or not isinstance(value, int | float)):
+        if isinstance(default, int | float) and (
+            isinstance(value, bool) or not isinstance(value, int | float)
+        ):
             raise InputError(f"{where}: [simulate] {key} = {value!r} should be a number, as {default!r}.")
         if isinstance(default, int | float) and not value > 0:
             raise InputError(f"{where}: [simulate] {key} = {value!r} should be above zero.")

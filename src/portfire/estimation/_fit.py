@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 
 STATUS_WORDS = {
     "converged": "The objective no longer rises.",
-    "iterations": "The objective still rose when the allowed iterations were spent; fit again from this fit (start=).",
+    "iterations": "The objective still rose when its iterations were spent; fit again with start= this fit.",
     "unconverged paths": "Some trials' paths did not settle; look at those trials, or use wider bins.",
 }
 
@@ -104,7 +104,9 @@ class Fit:
                 f"{self.setup.bin_s} s and {self.setup.n_before}; bin them alike."
             )
         if list(trials.contexts) != mine["contexts"]:
-            raise InputError(f"these trials have the contexts {list(trials.contexts)}, the fit {mine['contexts']}.")
+            raise InputError(
+                f"these trials have the contexts {list(trials.contexts)}, the fit {mine['contexts']}."
+            )
 
     def score(self, trials: Trials) -> pd.DataFrame:
         """Log marginal likelihood of every trial.
@@ -144,8 +146,10 @@ class Fit:
         """Write ``fit.json`` and ``arrays.npz`` into a folder, which is made where it is missing."""
         folder = Path(folder)
         folder.mkdir(parents=True, exist_ok=True)
-        np.savez(folder / "arrays.npz", **self.arrays())  # type: ignore[arg-type]
-        (folder / "fit.json").write_text(json.dumps(self.to_dict(), indent=1, allow_nan=False), encoding="utf-8")
+        np.savez(folder / "arrays.npz", allow_pickle=False, **self.arrays())
+        (folder / "fit.json").write_text(
+            json.dumps(self.to_dict(), indent=1, allow_nan=False), encoding="utf-8"
+        )
         return folder
 
     def arrays(self) -> dict[str, np.ndarray]:
@@ -177,7 +181,9 @@ def fit_from_parts(content: Mapping[str, Any], arrays: Mapping[str, np.ndarray])
     """Rebuild a fit from what `Fit.to_dict` and `Fit.arrays` gave."""
     model = model_from_dict(content["model"], content["model_name"], "fit.json")
     stored = dict(content["setup"])
-    columns = tuple(Column(s, level, float("inf") if h is None else h) for s, level, h in stored.pop("columns"))
+    columns = tuple(
+        Column(s, level, float("inf") if h is None else h) for s, level, h in stored.pop("columns")
+    )
     sources = tuple(stored.pop("sources"))
     setup = Setup(model=model, columns=columns, sources=sources, **stored)
     hazard = arrays.get("hazard")
@@ -207,7 +213,9 @@ def load_fit(folder: str | Path) -> Fit:
     folder = Path(folder)
     for name in ("fit.json", "arrays.npz"):
         if not (folder / name).is_file():
-            raise InputError(f"{folder}: there is no {name} here; give a folder that Fit.save or a run wrote.")
+            raise InputError(
+                f"{folder}: there is no {name} here; give a folder that Fit.save or a run wrote."
+            )
     try:
         content = json.loads((folder / "fit.json").read_text(encoding="utf-8"))
         with np.load(folder / "arrays.npz", allow_pickle=False) as stored:

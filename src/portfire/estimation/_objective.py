@@ -59,8 +59,13 @@ class Objective:
         results = list(self._pool.map(one, zip(self.packed.chunks, self.paths, strict=True)))
         posteriors = [posterior for posterior, _ in results]
         weights = [chunk.weight for chunk in self.packed.chunks]
-        value = sum(float((p.value + short) @ w) for (p, (_, _, short)), w in zip(results, weights, strict=True))
-        gradient = {name: sum(np.asarray(by[name]) for _, (by, _, _) in results) for name in params}
+        value = sum(
+            float((p.value + short) @ w) for (p, (_, _, short)), w in zip(results, weights, strict=True)
+        )
+        gradient = {
+            name: sum((np.asarray(by[name]) for _, (by, _, _) in results), np.zeros(np.shape(params[name])))
+            for name in params
+        }
         self.last = [(p.mode, moments) for p, (_, moments, _) in results]
         if np.isfinite(value):
             self.paths = [posterior.mode for posterior in posteriors]

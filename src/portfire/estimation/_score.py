@@ -10,6 +10,7 @@ import pandas as pd
 from portfire.estimation._fit import Fit
 from portfire.estimation._objective import n_threads, to_device
 from portfire.inference import (
+    Chunk,
     Packed,
     importance,
     lane_keys,
@@ -32,7 +33,7 @@ def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[
     """
     device, setup = to_device(fitted.params), fitted.setup
 
-    def one(chunk):  # type: ignore[no-untyped-def]
+    def one(chunk: Chunk) -> tuple[np.ndarray, np.ndarray]:
         keys = lane_keys(fitted.seed, chunk)
         posterior = laplace(device, setup, chunk, start_path(setup, chunk))
         sampled = importance(device, setup, chunk, posterior, keys, n_pairs)

@@ -61,7 +61,9 @@ def start_values(trials: Trials, setup: Setup) -> dict[str, np.ndarray]:
         width = SMOOTHING_S / setup.bin_s
         seen = gaussian_filter1d(trials.mask.astype(float), width, axis=1, mode="constant")
         values = np.sqrt(trials.counts) * trials.mask[:, :, None]
-        log_rate = gaussian_filter1d(values, width, axis=1, mode="constant") / np.maximum(seen, 1e-9)[:, :, None]
+        log_rate = (
+            gaussian_filter1d(values, width, axis=1, mode="constant") / np.maximum(seen, 1e-9)[:, :, None]
+        )
         mean = np.ones(setup.n_units)
     observed = log_rate[trials.mask]
     centre = observed.mean(axis=0)
@@ -79,9 +81,14 @@ def start_values(trials: Trials, setup: Setup) -> dict[str, np.ndarray]:
     both = live[:, 1:] & live[:, :-1]
     trial, time = np.nonzero(both)
     pushes = rows[trial][:, lasting] * kernels[lasting][:, time + 1].T
-    regressors = np.concatenate([after[trial, time], np.ones((len(trial), 1)), cue[:, time + 1].T, pushes], axis=1)
+    regressors = np.concatenate(
+        [after[trial, time], np.ones((len(trial), 1)), cue[:, time + 1].T, pushes], axis=1
+    )
     change = after[trial, time + 1] - after[trial, time]
-    beta = _ridge(regressors / (norm := np.linalg.norm(regressors, axis=0) + 1e-12), change, 1e-6) / norm[:, None]
+    beta = (
+        _ridge(regressors / (norm := np.linalg.norm(regressors, axis=0) + 1e-12), change, 1e-6)
+        / norm[:, None]
+    )
     residual = change - regressors @ beta
     noise_cov = np.atleast_2d(np.cov(residual.T)) + 1e-9 * np.eye(d)
     whiten = _symmetric_power(noise_cov, -0.5)

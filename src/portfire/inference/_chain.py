@@ -122,7 +122,9 @@ def factorise(diagonal: jax.Array, off: jax.Array, right: jax.Array) -> tuple[Fa
     _, d, _, n_lanes = diagonal.shape
     off = jnp.concatenate([off, jnp.zeros_like(off[:1])]) if off.shape[0] else jnp.zeros((1, d, d, 1))
 
-    def step(carry: tuple[jax.Array, jax.Array], block: tuple[jax.Array, ...]) -> tuple:
+    def step(
+        carry: tuple[jax.Array, jax.Array], block: tuple[jax.Array, ...]
+    ) -> tuple[tuple[jax.Array, jax.Array], tuple[jax.Array, ...]]:
         schur, done = carry
         h, o, r = block
         columns, inverse = cholesky(h - schur)

@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import NamedTuple
 
+import jax
 import jax.numpy as jnp
 import numpy as np
 
@@ -34,17 +35,17 @@ class Chunk(NamedTuple):
         One for a trial, zero for an empty lane.
     constant : array, shape (lane,)
         Log-likelihood terms that no parameter touches (nats).
-    index : array of int, shape (lane,)
+    place : array of int, shape (lane,)
         Position of the trial in its session (random numbers hang on it).
     """
 
-    counts: np.ndarray
-    mask: np.ndarray
-    rows: np.ndarray
-    drift: np.ndarray
-    weight: np.ndarray
-    constant: np.ndarray
-    index: np.ndarray
+    counts: jax.Array
+    mask: jax.Array
+    rows: jax.Array
+    drift: jax.Array
+    weight: jax.Array
+    constant: jax.Array
+    place: jax.Array
 
 
 @dataclass(frozen=True)
@@ -120,7 +121,13 @@ def _cut(order: np.ndarray, lanes: int) -> Iterator[np.ndarray]:
 
 
 def _fill(
-    trials: Trials, setup: Setup, mask: np.ndarray, design: np.ndarray, part: np.ndarray, lanes: int, n_time: int
+    trials: Trials,
+    setup: Setup,
+    mask: np.ndarray,
+    design: np.ndarray,
+    part: np.ndarray,
+    lanes: int,
+    n_time: int,
 ) -> Chunk:
     n, keep = len(part), min(n_time, trials.counts.shape[1])
     readout = READOUTS[setup.model.readout]
@@ -136,8 +143,8 @@ def _fill(
     table[:, :n] = design[part].T
     weight = np.zeros(lanes)
     weight[:n] = 1.0
-    index = np.zeros(lanes, dtype=np.int32)
-    index[:n] = trials.index[part]
+    place = np.zeros(lanes, dtype=np.int32)
+    place[:n] = trials.index[part]
     n_columns = len(setup.columns)
-    chunk = Chunk(counts, seen, table[:n_columns], table[n_columns:], weight, constant, index)
-    return Chunk(*(jnp.asarray(entry) for entry in chunk))
+    entries = (counts, seen, table[:n_columns], table[n_columns:], weight, constant, place)
+    return Chunk(*map(jnp.asarray, entries))

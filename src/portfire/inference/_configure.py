@@ -19,7 +19,7 @@ def cache_folder() -> Path:
 def configure() -> None:
     """Turn on float64 and the persistent compilation cache for this process."""
     jax.config.update("jax_enable_x64", True)
-    if jax.config.jax_compilation_cache_dir is None:
+    if jax.config.values["jax_compilation_cache_dir"] is None:
         jax.config.update("jax_compilation_cache_dir", str(cache_folder() / "compiled"))
         jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.2)
         jax.config.update("jax_persistent_cache_min_entry_size_bytes", 0)

@@ -44,13 +44,13 @@ class Sampled(NamedTuple):
 
 def lane_keys(seed: int, chunk: Chunk) -> jax.Array:
     """One random key a lane, hung on the trial's place in its session: the same for every account."""
-    return jax.vmap(lambda index: jax.random.fold_in(jax.random.key(seed), index))(chunk.index)
+    return jax.vmap(lambda place: jax.random.fold_in(jax.random.key(seed), place))(chunk.place)
 
 
 @partial(jax.jit, static_argnames=("count",))
 def draw_deviations(posterior: Posterior, keys: jax.Array, count: int) -> tuple[jax.Array, jax.Array]:
     """Deviations from the mode, x of shape (time, D, count, lane) and e of shape (D, count, lane)."""
-    n_time, d, n_lanes = posterior.mode.x.shape
+    n_time, d, _ = posterior.mode.x.shape
     noise = jax.vmap(lambda key: jax.random.normal(key, (n_time + 1, d, count)), out_axes=-1)(keys)
     columns = [posterior.corner.lower[:, j] for j in range(d)]
     e = solve_upper(columns, list(posterior.corner.inverse_diagonal), noise[-1])
@@ -85,11 +85,15 @@ def importance(
     def one_pair(carry: None, step: jax.Array) -> tuple[None, jax.Array]:
         inner = jax.vmap(lambda key: jax.random.fold_in(key, step))(keys)
         x, e = draw_deviations(posterior, inner, 1)
-        tilt = jnp.sum(posterior.slack.x * x[:, :, 0], axis=(0, 1)) + jnp.sum(posterior.slack.e * e[:, 0], axis=0)
+        tilt = jnp.sum(posterior.slack.x * x[:, :, 0], axis=(0, 1)) + jnp.sum(
+            posterior.slack.e * e[:, 0], axis=0
+        )
         flat = x[:, :, 0].transpose(1, 0, 2).reshape(d, -1).astype(single)
         change = (c @ flat).reshape(-1, n_time, n_lanes)
         logs = [
-            jnp.sum(readout.remainder(low, eta_low, sign * change, setup.bin_s) * mask, axis=(0, 1)).astype(jnp.float64)
+            jnp.sum(readout.remainder(low, eta_low, sign * change, setup.bin_s) * mask, axis=(0, 1)).astype(
+                jnp.float64
+            )
             + sign * tilt
             for sign in (1.0, -1.0)
         ]

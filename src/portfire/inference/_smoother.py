@@ -274,7 +274,10 @@ def _begin(
     params: Params, setup: Setup, chunk: Chunk, given: tuple[PathPrior, jax.Array] | None = None
 ) -> tuple[_Data, PathPrior, jax.Array, _PriorBlocks]:
     n_time = chunk.mask.shape[0]
-    prior, inputs = given or (path_prior(params, setup, n_time), path_inputs(params, setup, n_time, chunk.rows))
+    prior, inputs = given or (
+        path_prior(params, setup, n_time),
+        path_inputs(params, setup, n_time, chunk.rows),
+    )
     return _prepare(params, setup, chunk), prior, inputs, _prior_blocks(prior, setup.n_before)
 
 
@@ -315,7 +318,9 @@ def laplace(
         log_prior, by_x, by_border = _prior_terms(prior, inputs, setup.n_before, trial)
         slack = Path(gradient + by_x, by_border)
         step = _newton_step(blocks, hessian, slack)
-        decrement = jnp.sum(slack.x * step.direction.x, axis=(0, 1)) + jnp.sum(slack.e * step.direction.e, axis=0)
+        decrement = jnp.sum(slack.x * step.direction.x, axis=(0, 1)) + jnp.sum(
+            slack.e * step.direction.e, axis=0
+        )
         return value + log_prior, slack, 0.5 * decrement, step
 
     def body(state: _Search) -> _Search:
@@ -325,7 +330,7 @@ def laplace(
         total, slack, decrement, step = evaluate(trial)
         accept = (total >= state.best - 1e-9 * (1 + jnp.abs(state.best))) & jnp.isfinite(decrement)
         return _Search(
-            state.count + 1,
+            state.n_sweeps + 1,
             Path(jnp.where(accept, trial.x, state.held.x), jnp.where(accept, trial.e, state.held.e)),
             jnp.where(accept, total, state.best),
             Path(
@@ -339,7 +344,9 @@ def laplace(
         )
 
     def unfinished(state: _Search) -> jax.Array:
-        return (state.count < MAX_SWEEPS) & jnp.any((state.decrement > DECREMENT_TOLERANCE) & (chunk.weight > 0))
+        return (state.n_sweeps < MAX_SWEEPS) & jnp.any(
+            (state.decrement > DECREMENT_TOLERANCE) & (chunk.weight > 0)
+        )
 
     zero = Path(jnp.zeros_like(path.x), jnp.zeros_like(path.e))
     blank = jax.tree.map(lambda leaf: jnp.zeros(leaf.shape, leaf.dtype), jax.eval_shape(evaluate, path)[3])
@@ -353,14 +360,22 @@ def laplace(
     left = jnp.where(converged, end.decrement, 0.0)
     value = end.best + left + size - 0.5 * log_det
     return Posterior(
-        end.held, value, end.count, converged, end.slack, left, step.factor, step.border_solution, step.corner
+        end.held,
+        value,
+        end.n_sweeps,
+        converged,
+        end.slack,
+        left,
+        step.factor,
+        step.border_solution,
+        step.corner,
     )
 
 
 class _Search(NamedTuple):
     """State of the search for the mode; ``slack`` and ``step`` belong to the last point tried."""
 
-    count: jax.Array
+    n_sweeps: jax.Array
     held: Path
     best: jax.Array
     direction: Path

@@ -41,7 +41,9 @@ def write_outputs(
     write_table_atomic(out / "decode.parquet", _decode_table(findings))
     write_table_atomic(out / "trials.parquet", _trial_table(findings))
     write_dataset_atomic(out / "latents.nc", _latents(findings, store))
-    write_dataset_atomic(out / "rates.nc", _rates(trials, store.read(findings.describe)[1]["predicted_rates"]))
+    write_dataset_atomic(
+        out / "rates.nc", _rates(trials, store.read(findings.describe)[1]["predicted_rates"])
+    )
     behaviour = summarise_behaviour(trials, seed=findings.job.seed).to_dict()
     warnings = [*evidence.warnings, *findings.warnings]
     if trials.context is not None:
@@ -93,7 +95,7 @@ def _chosen(findings: Findings) -> dict[str, Any]:
 
 
 def _other_models(findings: Findings, store: Store) -> list[pd.DataFrame]:
-    """Held-out scores of the full account under the model files that were not chosen, each at its best size."""
+    """Held-out scores of the full account under each model file not chosen, at its best size."""
     trials, sizes = findings.trials, findings.sizes
     best = sizes.chosen[ALL]
     candidates, _ = sizes.choices[ALL]
@@ -182,7 +184,17 @@ def _decode_table(findings: Findings) -> pd.DataFrame:
     frames = [found.to_table(findings.trials.trial) for found in findings.decodings if found.variant == "all"]
     if frames:
         return pd.concat(frames, ignore_index=True)
-    names = ("trial", "condition", "fold", "cutoff_s", "features", "produced_s", "baseline_s", "predicted_s", "variant")
+    names = (
+        "trial",
+        "condition",
+        "fold",
+        "cutoff_s",
+        "features",
+        "produced_s",
+        "baseline_s",
+        "predicted_s",
+        "variant",
+    )
     return pd.DataFrame({name: pd.Series(dtype=float) for name in names})
 
 
@@ -213,7 +225,9 @@ def _latents(findings: Findings, store: Store) -> xr.Dataset:
         _, part = store.read(key)
         causal[part["rows"]] = part["state"]
     smooth = np.where(trials.mask[:, trials.n_before :, None], smooth, np.nan)
-    pushes = {name: arrays[f"smooth_{name}"] for name in ("initial", "sustained", "initial_cov", "sustained_cov")}
+    pushes = {
+        name: arrays[f"smooth_{name}"] for name in ("initial", "sustained", "initial_cov", "sustained_cov")
+    }
     return xr.Dataset(
         {
             "state": (("trial", "time", "latent"), smooth),

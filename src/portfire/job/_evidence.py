@@ -133,16 +133,16 @@ def _complaints(ladder: dict[str, Any], where: str) -> list[str]:
     place = f"at {ladder['latent_dim']} latent dimensions, {where}"
     out = []
     if not ladder["agreed"]:
-        out.append(f"Nested accounts {place} still differed by more than 0.05 nats after several rounds of refitting.")
+        out.append(
+            f"After several rounds of refitting {place} an account still stood below one that it contains."
+        )
     for account, entry in ladder["accounts"].items():
         if entry["status"] != "converged":
             out.append(f"The fit of {account} {place} ended with status '{entry['status']}'.")
     return out
 
 
-def _row(
-    findings: Findings, store: Store, source: str, by_shift: dict[int, Contrast]
-) -> dict[str, Any]:
+def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Contrast]) -> dict[str, Any]:
     here = by_shift[0]
     best = findings.sizes.chosen[ALL]
     at_dims: dict[int, Verdict] = {

@@ -40,7 +40,10 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     session = read_session(job.sessions[0], columns=dict(job.columns) or None)
     trials = session.bin(job.window.bin_s, job.window.before_set_s, job.window.min_rate_hz)
     job = check_job(job, len(trials.unit), len(trials))
-    models = [replace(read_model(path), name=name) for path, name in zip(job.model.files, job.model.names, strict=True)]
+    models = [
+        replace(read_model(path), name=name)
+        for path, name in zip(job.model.files, job.model.names, strict=True)
+    ]
     progress = workspace.progress
     progress.say(
         f"{session_name(job.sessions[0])}: {len(trials)} trials, {len(trials.unit)} units, "
@@ -117,7 +120,11 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
     fits = stages.full_fits([(best, fold) for fold in stages.folds], sizes)
     tasks = [
         stages.task(
-            "infer_features", f"states without fold {fold + 1}", "states", [fits[best, fold]], cutoffs_s=cutoffs
+            "infer_features",
+            f"states without fold {fold + 1}",
+            "states",
+            [fits[best, fold]],
+            cutoffs_s=cutoffs,
         )
         for fold in stages.folds
     ]
@@ -147,7 +154,7 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
                 job.compare.folds,
                 cutoff,
                 trials.bin_s,
-                variant=variant,  # type: ignore[arg-type]
+                variant=variant,
                 draws=job.decode.draws,
                 level=job.tests.level,
                 seed=job.seed,

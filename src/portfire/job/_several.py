@@ -39,6 +39,8 @@ def run_several(job: Job, workspace: Workspace, run_one: Callable[[Job, Workspac
             "contrasts": [{"session": row["session"], **c} for row in rows for c in row["contrasts"]],
             "decode": [],
             "accounts": [],
-            "warnings": [f"Several sessions: the results of each are in the folder of its name ({', '.join(names)})."],
+            "warnings": [
+                f"Several sessions: the results of each are in the folder of its name ({', '.join(names)})."
+            ],
         },
     )

@@ -23,6 +23,9 @@ ALL = -1
 # hundredths of a nat a held-out trial, a likelihood ratio on tenths of a nat in all.
 SIZE_TOLERANCE, HELD_OUT_TOLERANCE, ALL_TOLERANCE = 1.0, 0.3, 0.1
 
+# The folds that a fit holds out, and which half of the rest where those are split once more.
+Split = tuple[tuple[int, ...], int | None]
+
 
 @dataclass(frozen=True)
 class Size:
@@ -83,7 +86,7 @@ class Stages:
             data=self.data.name,
             code=code_version(),
             deps=list(deps),
-            kwargs={k: v for k, v in kwargs.items()},
+            kwargs=dict(kwargs),
         )
         return Task(name, key, f"portfire.job._work:{function}", kwargs, tuple(deps), stage)
 
@@ -112,8 +115,9 @@ class Stages:
         name = f"{size.latent_dim} latent dimensions, {what}"
         return self.task("fit_full", name, "size", deps, **kwargs)
 
-    def inner_tasks(self, size: Size, deps: dict[tuple, str]) -> dict[tuple, Task]:
+    def inner_tasks(self, size: Size, deps: dict[Split, str]) -> dict[Split, Task]:
         """Fits inside training sets, by what they hold out; one serves both folds that it holds out."""
+        pairs: list[Split]
         if len(self.folds) > 2:
             # Each fold is held out together with the next: its training set is split twice.
             n = len(self.folds)
@@ -127,7 +131,7 @@ class Stages:
             for held, inner in pairs
         }
 
-    def inner_scores(self, tasks: dict[tuple, Task], outer: int) -> np.ndarray:
+    def inner_scores(self, tasks: dict[Split, Task], outer: int) -> np.ndarray:
         """Held-out scores, inside the training set of a fold, of the trials in its other folds."""
         fold = fold_of(self.trials.index, self.trials.n_session, self.job.compare.folds)
         out = np.full(len(self.trials), np.nan)
@@ -159,7 +163,9 @@ class Stages:
         wanted = {size for size in chosen.values() if self.models[size.model].drift == "choose"}
         without = [Size(size.model, size.latent_dim, False) for size in sorted(wanted, key=str)]
         if without:
-            more_inner, more_outer = self._fit_candidates(without, {Size(s.model, s.latent_dim, True): s for s in without}, inner, outer)
+            more_inner, more_outer = self._fit_candidates(
+                without, {Size(s.model, s.latent_dim, True): s for s in without}, inner, outer
+            )
             inner, outer = inner | more_inner, outer | more_outer
         choices, settled = {}, {}
         for where in (*self.folds, ALL):
@@ -174,7 +180,7 @@ class Stages:
     def _pick(
         self,
         options: Sequence[Size],
-        inner: dict[Size, dict[tuple, Task]],
+        inner: dict[Size, dict[Split, Task]],
         outer: dict[Size, dict[int, str]],
         where: int,
     ) -> tuple[Size, Choice]:
@@ -189,12 +195,12 @@ class Stages:
         self,
         sizes: Sequence[Size],
         starts: dict[Size, Size],
-        inner_before: dict[Size, dict[tuple, Task]] | None = None,
+        inner_before: dict[Size, dict[Split, Task]] | None = None,
         outer_before: dict[Size, dict[int, str]] | None = None,
-    ) -> tuple[dict[Size, dict[tuple, Task]], dict[Size, dict[int, str]]]:
+    ) -> tuple[dict[Size, dict[Split, Task]], dict[Size, dict[int, str]]]:
         """Fit candidates on every training set, small sets first: larger ones start from within them."""
         came_from = {new: old for old, new in starts.items()}
-        inner: dict[Size, dict[tuple, Task]] = {}
+        inner: dict[Size, dict[Split, Task]] = {}
         tasks: list[Task] = []
         outer: dict[Size, dict[int, str]] = {}
         for size in sizes:
@@ -231,9 +237,7 @@ class Stages:
         self.run(tasks)
         return keys
 
-    def ladder_task(
-        self, size: Size, where: int, full: str, sources: Sequence[str], scored: bool
-    ) -> Task:
+    def ladder_task(self, size: Size, where: int, full: str, sources: Sequence[str], scored: bool) -> Task:
         """Fit all accounts of the contrasts at one size on one training set.
 
         ``scored`` asks for the scores of the training trials themselves, where none are held out.

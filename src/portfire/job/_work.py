@@ -58,7 +58,9 @@ def _score(fitted: Fit, trials: Trials, rows: np.ndarray) -> dict[str, np.ndarra
     return {"rows": rows, "loglik": table["loglik"].to_numpy(), "loglik_se": table["loglik_se"].to_numpy()}
 
 
-def fit_full(store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str) -> dict[str, float]:
+def fit_full(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
     """Fit the full account to a training set and score it on what was held out."""
     trials = read_trials(data)
     train, test = _train_and_test(trials, kwargs)
@@ -89,7 +91,9 @@ def fit_ladder(
     drift = bool(kwargs["drift"])
 
     def refit(account: Account, start: Fit) -> Fit:
-        return fit(train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance)
+        return fit(
+            train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance
+        )
 
     if kwargs["score_training"]:
         test = np.arange(len(trials))

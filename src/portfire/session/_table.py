@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from decimal import Decimal
 
 import numpy as np
 
@@ -228,8 +229,8 @@ def _parse_number(table: Table, row: int, column: str, cell: object) -> float:
         return value
     if isinstance(cell, bool | np.bool_):
         return float(cell)
-    if isinstance(cell, int | float | np.integer | np.floating) or type(cell).__name__ == "Decimal":
-        return float(cell)  # type: ignore[arg-type]
+    if isinstance(cell, int | float | np.integer | np.floating | Decimal):
+        return float(cell)
     raise InputError(f"{where}: {shorten(cell)} is not a number; a plain number is needed.")
 
 

@@ -98,18 +98,18 @@ def simulate_session(
         if value is not None and value < 1:
             raise InputError(f"{name} = {value} is too few; give 1 or more.")
     wanted = None if account is None else Account.parse(account)
-    fitted = _find_fit(model_or_fit)
+    source = _read_source(model_or_fit)
     made_from: dict[str, Any] = {"n_trials": n_trials, "n_units": n_units, "seed": seed}
     made_from["account"] = None if wanted is None else str(wanted)
-    if fitted is None:
-        scenario = scenario_of_model(read_model(model_or_fit), n_trials, n_units, wanted)  # type: ignore[arg-type]
+    if isinstance(source, ModelFile):
+        scenario = scenario_of_model(source, n_trials, n_units, wanted)
         made_from = {"model": scenario.model.name, **made_from}
         drawn = draw_scenario(scenario, seed)
         story = f"Made by `portfire simulate` from the model {scenario.model.name!r}, seed {seed}."
     else:
-        drawn = draw(_system(fitted, n_units, wanted, seed), n_trials or fitted.session["n_trials"], seed)
-        made_from = {"fit": fitted.session["digest"], "fit_account": str(fitted.account), **made_from}
-        story = f"Made by `portfire simulate` from a fit of {fitted.account}, seed {seed}."
+        drawn = draw(_system(source, n_units, wanted, seed), n_trials or source.session["n_trials"], seed)
+        made_from = {"fit": source.session["digest"], "fit_account": str(source.account), **made_from}
+        story = f"Made by `portfire simulate` from a fit of {source.account}, seed {seed}."
     story += f"\nTruth: {drawn.system.account}."
     write_folder(out, drawn, made_from, story)
     return out
@@ -143,13 +143,13 @@ def write_demo_session(out: str | Path, seed: int = 0) -> Path:
     return out
 
 
-def _find_fit(model_or_fit: object) -> Fit | None:
+def _read_source(model_or_fit: str | Path | Mapping[str, Any] | ModelFile | Fit) -> ModelFile | Fit:
     if isinstance(model_or_fit, Mapping | ModelFile):
-        return None
+        return read_model(model_or_fit)
     if not isinstance(model_or_fit, str | Path):
-        return model_or_fit  # type: ignore[return-value]
+        return model_or_fit
     if str(model_or_fit) in shipped_models() or not Path(model_or_fit).is_dir():
-        return None
+        return read_model(model_or_fit)
     from portfire.estimation import load_fit
 
     return load_fit(model_or_fit)
