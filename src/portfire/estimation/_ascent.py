@@ -10,12 +10,13 @@ from portfire.accounts import Account
 from portfire.dynamics import Setup
 from portfire.estimation._freedom import Freedom, free_parameters, project
 from portfire.estimation._objective import Objective, Values
-from portfire.estimation._optimise import Curvature, ascend
+from portfire.estimation._optimise import ascend
+from portfire.estimation._scaling import Scaling, make_scaling
 from portfire.estimation._start import start_values
 from portfire.inference import Packed, Path, pack
 from portfire.session import Trials
 
-_SUBSET_TRIALS = 128
+_PART_TRIALS = 64
 
 
 @dataclass(frozen=True)
@@ -60,9 +61,20 @@ def _open_covariances(objective: Objective, params: Values, setup: Setup, freedo
     return params
 
 
-def _scale(curvature: Curvature, factor: float) -> Curvature:
-    """Curvature as if there had been ``factor`` times the trials."""
-    return tuple((step, {name: factor * part for name, part in change.items()}) for step, change in curvature)
+def _scale(objective: Objective, params: Values, setup: Setup, freedom: Freedom) -> Scaling:
+    """Scaled coordinates around ``params``, from the posteriors of the first chunks."""
+    objective(params)
+    packed = objective.packed
+    n_chunks = min(len(packed.chunks), 3)
+    share = sum(len(rows) for rows in packed.members[:n_chunks]) / packed.n_trials
+    return make_scaling(params, setup, freedom, packed, objective.last[:n_chunks], share)
+
+
+def _part(trials: Trials, n_trials: int) -> Trials:
+    """Trials spread evenly over the session."""
+    if len(trials) <= n_trials:
+        return trials
+    return trials[np.round(np.linspace(0, len(trials) - 1, n_trials)).astype(int)]
 
 
 def find_maximum(
@@ -89,22 +101,18 @@ def find_maximum(
         In nats.
     """
     freedom = free_parameters(account, setup, drift)
-    curvature: Curvature = ()
     if start is None:
         params = project(start_values(trials, setup), freedom)
-        if len(trials) >= 2 * _SUBSET_TRIALS:
-            step = len(trials) // _SUBSET_TRIALS
-            part = Objective(pack(trials[np.arange(0, len(trials), step)], setup), setup)
-            climbed = ascend(part, params, setup, freedom, 0.5, max_iterations)
-            params = climbed.params
+        if len(trials) >= 2 * _PART_TRIALS:
+            part = Objective(pack(_part(trials, _PART_TRIALS), setup), setup)
+            params = ascend(part, _scale(part, params, setup, freedom), 1.0, max_iterations).params
             part.close()
-            curvature = _scale(climbed.curvature, len(trials) / part.packed.n_trials)
     else:
         params = project(start, freedom)
     packed = pack(trials, setup)
     objective = Objective(packed, setup)
     params = _open_covariances(objective, params, setup, freedom)
-    ascent = ascend(objective, params, setup, freedom, tolerance, max_iterations, curvature)
+    ascent = ascend(objective, _scale(objective, params, setup, freedom), tolerance, max_iterations)
     objective.close()
     status = "unconverged paths" if objective.n_unconverged else ascent.status
     return Maximum(ascent.params, ascent.value, ascent.trace, status, packed, objective.paths)

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
     import xarray as xr
 
+DEFAULT_LATENT_DIM = 3
 STATUS_WORDS = {
     "converged": "The objective no longer rises.",
     "iterations": "The objective still rose when its iterations were spent; fit again with start= this fit.",
@@ -242,7 +243,7 @@ def fit(
     trials: Trials,
     model: str | Path | Mapping[str, Any] | ModelFile = "linear",
     account: str | Account | Mapping[str, str] | None = None,
-    latent_dim: int = 3,
+    latent_dim: int | None = None,
     seed: int = 0,
     *,
     start: Fit | None = None,
@@ -260,8 +261,8 @@ def fit(
         A shipped name, a model file, or its tables.
     account : str or Account, optional
         Which source may push by which route; the full account by default.
-    latent_dim : int, default 3
-        Latent dimensions D, at most the number of units.
+    latent_dim : int, optional
+        Latent dimensions D, at most the number of units; 3 by default, or those of ``start``.
     seed : int, default 0
         Kept with the fit; scores hang on it.
     start : Fit, optional
@@ -281,15 +282,24 @@ def fit(
     Raises
     ------
     InputError
-        If there are more latent dimensions than units, or no trials.
+        If there are more latent dimensions than units, or no trials, or ``start`` is of another size or
+        of other units than these trials.
     """
     spec = read_model(model)
     if len(trials) == 0:
         raise InputError("there are no trials to fit.")
+    if latent_dim is None:
+        latent_dim = start.latent_dim if start else DEFAULT_LATENT_DIM
     if not 1 <= latent_dim <= len(trials.unit):
         raise InputError(
             f"latent_dim = {latent_dim} does not suit {len(trials.unit)} units; give 1 to {len(trials.unit)}."
         )
+    if start is not None:
+        start.check(trials)
+        if start.latent_dim != latent_dim:
+            raise InputError(
+                f"latent_dim = {latent_dim}, but the fit to start from has {start.latent_dim}; give the same."
+            )
     if drift is None:
         drift = start.drift if start else spec.drift != "off"
     setup = start.setup if start else make_setup(trials, spec, latent_dim, spec.drift != "off", n_reference)

@@ -1,7 +1,4 @@
-"""Quasi-Newton ascent (L-BFGS: Liu and Nocedal 1989, Math. Program. 45:503) in scaled coordinates.
-
-Curvature that one ascent has seen is handed to the next: nested accounts share most of their Hessian.
-"""
+"""Quasi-Newton ascent (L-BFGS: Liu and Nocedal 1989, Math. Program. 45:503) in scaled coordinates."""
 
 from __future__ import annotations
 
@@ -9,17 +6,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from portfire.dynamics import Setup
-from portfire.estimation._freedom import Freedom
 from portfire.estimation._objective import Objective, Values
-from portfire.estimation._scaling import Scaling, make_scaling
+from portfire.estimation._scaling import Scaling
 
-MEMORY = 60
+MEMORY = 40
 _LOOK_BACK = 4
 _ARMIJO = 1e-4
 _MAX_HALVINGS = 12
-
-Curvature = tuple[tuple[Values, Values], ...]
 
 
 @dataclass(frozen=True)
@@ -34,31 +27,24 @@ class Ascent:
     trace : tuple of float
         Objective after every iteration.
     status : {"converged", "iterations"}
-    curvature : tuple of pairs
-        Steps and changes of the gradient (of minus the objective), by parameter.
     """
 
     params: Values
     value: float
     trace: tuple[float, ...]
     status: str
-    curvature: Curvature
 
 
 class _Memory:
     """Pairs of steps and gradient changes in flat coordinates, newest last."""
 
-    def __init__(self, pairs: list[tuple[np.ndarray, np.ndarray]]) -> None:
+    def __init__(self) -> None:
         self.pairs: list[tuple[np.ndarray, np.ndarray]] = []
-        for step, change in pairs:
-            self.add(step, change)
 
-    def add(self, step: np.ndarray, change: np.ndarray) -> bool:
+    def add(self, step: np.ndarray, change: np.ndarray) -> None:
         """Keep a pair whose curvature is positive."""
-        if step @ change <= 1e-8 * np.linalg.norm(step) * np.linalg.norm(change):
-            return False
-        self.pairs = [*self.pairs, (step, change)][-MEMORY:]
-        return True
+        if step @ change > 1e-8 * np.linalg.norm(step) * np.linalg.norm(change):
+            self.pairs = [*self.pairs, (step, change)][-MEMORY:]
 
     def solve(self, gradient: np.ndarray) -> np.ndarray:
         """Inverse Hessian times a vector (two-loop recursion)."""
@@ -77,54 +63,34 @@ class _Memory:
 
 
 def ascend(
-    objective: Objective,
-    params: Values,
-    setup: Setup,
-    freedom: Freedom,
-    tolerance: float,
-    max_iterations: int,
-    curvature: Curvature = (),
+    objective: Objective, scaling: Scaling, tolerance: float, max_iterations: int
 ) -> Ascent:
-    """Maximise the objective from ``params`` over what is free.
+    """Maximise the objective from the centre of the scaling.
 
     Stops when the last four iterations together gained less than ``tolerance`` nats.
-
-    Parameters
-    ----------
-    curvature : tuple of pairs, optional
-        From an earlier ascent in the same coordinates of the latent space.
     """
+    params = scaling.centre
     value, gradient = objective(params)
-    packed = objective.packed
-    n_chunks = min(len(packed.chunks), 3)
-    share = sum(len(rows) for rows in packed.members[:n_chunks]) / packed.n_trials
-    scaling = make_scaling(params, setup, freedom, packed, objective.last[:n_chunks], share)
-    memory = _Memory([(scaling.push(step), scaling.pull_back(change)) for step, change in curvature])
-    flat = np.zeros(scaling.size)
-    slope = -scaling.pull_back(gradient)
-    trace = [value]
-    seen: list[tuple[Values, Values]] = list(curvature)
-    status = "iterations"
+    flat, slope = np.zeros(scaling.size), -scaling.pull_back(gradient)
+    memory, trace, status = _Memory(), [value], "iterations"
     for _ in range(max_iterations):
         moved = _search(objective, scaling, flat, value, slope, -memory.solve(slope))
         if moved is None and memory.pairs:
-            # Old curvature may mislead; a step in the scaled coordinates themselves is safe.
-            memory = _Memory([])
+            # Old curvature may mislead; a step in the coordinates themselves is safe.
+            memory = _Memory()
             moved = _search(objective, scaling, flat, value, slope, -slope)
         if moved is None:
             status = "converged"
             break
-        new_flat, new_value, new_params, new_gradient = moved
-        new_slope = -scaling.pull_back(new_gradient)
-        if memory.add(new_flat - flat, new_slope - slope):
-            change = {name: gradient[name] - new_gradient[name] for name in gradient}
-            seen.append(({name: new_params[name] - params[name] for name in params}, change))
-        flat, value, slope, params, gradient = new_flat, new_value, new_slope, new_params, new_gradient
+        new_flat, value, params, gradient = moved
+        new_slope = -scaling.pull_back(gradient)
+        memory.add(new_flat - flat, new_slope - slope)
+        flat, slope = new_flat, new_slope
         trace.append(value)
         if len(trace) > _LOOK_BACK and trace[-1] - trace[-1 - _LOOK_BACK] < tolerance:
             status = "converged"
             break
-    return Ascent(params, value, tuple(trace), status, tuple(seen[-MEMORY:]))
+    return Ascent(params, value, tuple(trace), status)
 
 
 def _search(

@@ -108,23 +108,6 @@ class Scaling:
             out[name] = out[name] + scale * parts[name]
         return out
 
-    def push(self, step: dict[str, np.ndarray]) -> np.ndarray:
-        """Flat vector of a step in the parameters; what is not free is dropped."""
-        free = self.freedom
-        blocks = [step["readout"], step["log_rate"][:, None]]
-        units = np.concatenate([*blocks, step["drift"]] if free.drift else blocks, axis=1)
-        pieces = [(self.units.transpose(0, 2, 1) @ units[:, :, None]).ravel()]
-        rows = self._rows(step)
-        pieces.append((rows @ self.steps).ravel())
-        if len(free.prompt):
-            pieces.append((self.prompt_left.T @ step["push"][:, free.prompt] @ self.prompt_right).ravel())
-        if free.initial_factor:
-            pieces.append(np.linalg.solve(self.initial, step["initial_factor"]).ravel())
-        if free.sustained_factor:
-            pieces.append(np.linalg.solve(self.sustained, step["sustained_factor"]).ravel())
-        pieces += [np.ravel(step[name] / scale) for name, scale in self.scalars.items()]
-        return np.concatenate(pieces)
-
     def _rows(self, values: dict[str, np.ndarray]) -> np.ndarray:
         return np.concatenate(
             [values["transition"], values["offset"][:, None], values["cue"], values["push"][:, self.freedom.lasting]],
@@ -213,10 +196,10 @@ def make_scaling(
     initial_cov = cov + start_cov
     prior = np.diag([0.0] * (d + 1) + [1.0] * (k_unit - d - 1))
     scalars: dict[str, np.ndarray] = {}
-    if "log_variance" in centre:
-        scalars["log_variance"] = np.full(setup.n_units, np.sqrt(2.0 / max(trials_bins(packed), 1)))
     if "log_run_up_noise" in centre:
         scalars["log_run_up_noise"] = np.array(np.sqrt(2.0 / (n_trials * before * d)))
+    if "log_variance" in centre:
+        scalars["log_variance"] = np.full(setup.n_units, np.sqrt(2.0 / max(trials_bins(packed), 1)))
     lasting_size = np.sqrt(setup.n_reference * noise / (2 * n_trials))
     return Scaling(
         centre=centre,

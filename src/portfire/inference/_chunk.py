@@ -15,8 +15,8 @@ from portfire.dynamics import READOUTS, Setup
 from portfire.session import Trials
 
 _LANES = (16, 64)
-# Short sessions are padded to one length: compiling for a second would cost more than it saves.
-_LENGTH_SHARES, _FEW_TRIALS = (0.7, 1.0), 400
+# Short sessions are padded to one length: compiling for others would cost more than it saves.
+_LENGTH_SHARES, _FEW_TRIALS = (0.5, 0.7, 1.0), 400
 
 
 class Chunk(NamedTuple):

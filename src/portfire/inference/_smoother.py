@@ -30,7 +30,7 @@ from portfire.inference._chain import (
 )
 from portfire.inference._chunk import Chunk
 
-DECREMENT_TOLERANCE = 1e-5
+DECREMENT_TOLERANCE = 1e-6
 MAX_SWEEPS = 60
 
 

@@ -21,7 +21,7 @@ from portfire.session import Trials
 ALL = -1
 # Nats that four iterations together must gain for a search to go on: a size is chosen on differences of
 # hundredths of a nat a held-out trial, a likelihood ratio on tenths of a nat in all.
-SIZE_TOLERANCE, HELD_OUT_TOLERANCE, ALL_TOLERANCE = 1.0, 0.3, 0.1
+SIZE_TOLERANCE, HELD_OUT_TOLERANCE, ALL_TOLERANCE, NEIGHBOUR_TOLERANCE = 1.0, 0.3, 0.1, 0.3
 
 # The folds that a fit holds out, and which half of the rest where those are split once more.
 Split = tuple[tuple[int, ...], int | None]
@@ -243,9 +243,10 @@ class Stages:
         ``scored`` asks for the scores of the training trials themselves, where none are held out.
         """
         held = [] if where == ALL else [where]
+        tolerance = HELD_OUT_TOLERANCE if held else NEIGHBOUR_TOLERANCE if scored else ALL_TOLERANCE
         kwargs = {
             **self._common(size, held),
-            "tolerance": ALL_TOLERANCE if where == ALL else HELD_OUT_TOLERANCE,
+            "tolerance": tolerance,
             "sources": list(sources),
             "score_training": scored,
         }
