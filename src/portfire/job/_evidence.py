@@ -75,7 +75,7 @@ def _score_in_sample(findings: Findings, store: Store, shift: int) -> tuple[Scor
     setup, n_train, warnings = None, 0.0, []
     for source in findings.job.compare.sources:
         ladder = store.read_meta(findings.ladders[shift, ALL, source])
-        warnings += _complaints(ladder, f"on all trials, for {source}")
+        warnings += _complaints(ladder, f"on all trials, for {source}", in_sample=True)
         n_train = float(ladder["n_train"])
         for account, entry in ladder["accounts"].items():
             # The full account stands in every source's ladder; the highest of its fits counts.
@@ -128,16 +128,16 @@ def _score_held_out(findings: Findings, store: Store) -> tuple[Scored, pd.DataFr
     return scored, pd.concat(frames, ignore_index=True), float(np.mean(n_train)), warnings
 
 
-def _complaints(ladder: dict[str, Any], where: str) -> list[str]:
+def _complaints(ladder: dict[str, Any], where: str, in_sample: bool = False) -> list[str]:
     """What a reader should know of fits that did not settle."""
     place = f"at {ladder['latent_dim']} latent dimensions, {where}"
     out = []
-    if not ladder["agreed"]:
+    if not ladder["agreed"] and not in_sample:
         out.append(
             f"After several rounds of refitting {place} an account still stood below one that it contains."
         )
     for account, entry in ladder["accounts"].items():
-        if entry["status"] != "converged":
+        if entry["status"] != "converged" and not (in_sample and entry["status"] == "iterations"):
             out.append(f"The fit of {account} {place} ended with status '{entry['status']}'.")
     return out
 

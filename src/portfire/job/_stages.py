@@ -25,6 +25,9 @@ SIZE_TOLERANCE, HELD_OUT_TOLERANCE, ALL_TOLERANCE, NEIGHBOUR_TOLERANCE = 1.0, 0.
 
 # The folds that a fit holds out, and which half of the rest where those are split once more.
 Split = tuple[tuple[int, ...], int | None]
+# With a dimension to spare a search creeps along a ridge; what it has after this many steps lacks a nat or
+# two in all, which is little beside the smallest gain worth having.
+MAX_ITERATIONS, NEIGHBOUR_ITERATIONS = 300, 50
 
 
 @dataclass(frozen=True)
@@ -249,6 +252,7 @@ class Stages:
             "tolerance": tolerance,
             "sources": list(sources),
             "score_training": scored,
+            "max_iterations": NEIGHBOUR_ITERATIONS if scored else MAX_ITERATIONS,
         }
         what = "all trials" if where == ALL else f"without fold {where + 1}"
         only = f" for {sources[0]}" if len(sources) == 1 else ""

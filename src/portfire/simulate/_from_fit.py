@@ -46,8 +46,8 @@ def system_of_fit(
         )
     if fitted.hazard is None:
         raise InputError(
-            "the fit has no response hazard, so that no response can be drawn; fit trials that have "
-            "responses, or simulate from a model file."
+            "the fit has no response hazard, so that no response can be drawn; make the fit with "
+            "`portfire fit` from trials that have responses, or simulate from a model file."
         )
     wanted = fitted.account if account is None else account.restrict(setup.sources)
     if not fitted.account.contains(wanted):

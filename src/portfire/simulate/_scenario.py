@@ -147,8 +147,8 @@ def demo_scenario() -> Scenario:
     """The scenario of `portfire demo`: ferrets lick after a shown interval and what a hum adds to it."""
     return Scenario(
         model=read_model("linear"),
-        n_trials=360,
-        n_units=50,
+        n_trials=300,
+        n_units=40,
         n_silent=3,
         share_aborted=0.015,
         share_missed=0.01,

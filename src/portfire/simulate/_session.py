@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from portfire.accounts import Account
 from portfire.dynamics import ModelFile, read_model, shipped_models
-from portfire.errors import InputError
+from portfire.errors import InputError, nearest
 from portfire.session import Session
 from portfire.simulate._draw import Drawn, Mishaps, draw
 from portfire.simulate._folder import check_folder, write_folder
@@ -148,8 +148,13 @@ def _read_source(model_or_fit: str | Path | Mapping[str, Any] | ModelFile | Fit)
         return read_model(model_or_fit)
     if not isinstance(model_or_fit, str | Path):
         return model_or_fit
-    if str(model_or_fit) in shipped_models() or not Path(model_or_fit).is_dir():
-        return read_model(model_or_fit)
+    text, known = str(model_or_fit), shipped_models()
+    if text in known or Path(text).is_file():
+        return read_model(text)
+    if not Path(text).exists():
+        near = nearest(text, known)
+        hint = f"did you mean {near!r}?" if near else f"shipped is {', '.join(known)}."
+        raise InputError(f"{text}: there is no such model or fit, neither a file nor a folder; {hint}")
     from portfire.estimation import load_fit
 
     return load_fit(model_or_fit)
