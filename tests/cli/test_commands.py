@@ -67,12 +67,16 @@ WRONG = [
     (("fit", "{session}", "--account", "contxt=both", "--out", "{tmp}/f"), "did you mean 'context'"),
     (("fit", "{session}", "--account", "context=bth", "--out", "{tmp}/f"), "did you mean 'both'"),
     (("fit", "{session}", "--account", "context=both", "--model", "linaer", "--out", "{tmp}/f"), '"linear"'),
+    (("fit", "{session}", "--account", "context=both", "--out", "{session}"), "into the session itself"),
     (("simulate", "linear"), "Missing option '--out'"),
+    (("simulate", "linaer", "--out", "{tmp}/s"), "linaer: there is no such model or fit"),
+    (("simulate", "{session}", "--out", "{tmp}/s"), "there is no fit.json here"),
     (("simulate", "linear", "--out", "{tmp}/s", "--trials", "0"), "0 is not in the range"),
     (("simulate", "linear", "--out", "{session}/spikes.csv"), "spikes.csv: is a file, but a folder"),
     (("report", "{tmp}/nowhere"), "nowhere: does not exist"),
     (("report", "{session}"), "holds no result.json"),
     (("demo", "--out", "{session}/spikes.csv"), "spikes.csv: is a file, but a folder"),
+    (("demo", "--out", "{session}"), "holds 'spikes.csv' and is no earlier demo"),
     (("demo", "--seed", "-1"), "-1 is not in the range"),
 ]
 
@@ -153,6 +157,12 @@ def test_demo_makes_its_session_and_a_job_file_to_copy(portfire, tmp_path, quick
     assert wanted.seed == 4
     assert (tmp_path / "demo" / "job.toml").is_file()
     assert "report.html" in out
+
+
+def test_demo_leaves_the_job_of_somebody_else_alone(portfire, tmp_path):
+    (tmp_path / "job.toml").write_text('session = "monday"\n')
+    expect_one_line(portfire("demo", "--out", tmp_path), "holds 'job.toml' and is no earlier demo", 2)
+    assert (tmp_path / "job.toml").read_text() == 'session = "monday"\n'
 
 
 def test_simulate_passes_on_what_was_asked(portfire, tmp_path, monkeypatch):

@@ -107,7 +107,14 @@ def inspect(session: Path, as_json: bool) -> None:
     help="Such as interval=both,context=initial,trial=initial; a source left out is none.",
 )
 @click.option("--out", type=_PATH, required=True, help="Folder for the fit.")
-@click.option("--latent-dim", type=click.IntRange(min=1), default=3, show_default=True, metavar="N")
+@click.option(
+    "--latent-dim",
+    type=click.IntRange(min=1),
+    default=3,
+    show_default=True,
+    metavar="N",
+    help="Number of latent dimensions.",
+)
 @_seed_option
 def fit(session: Path, model: str, account: str, out: Path, latent_dim: int, seed: int) -> None:
     """Fit one account to a session.
@@ -120,9 +127,12 @@ def fit(session: Path, model: str, account: str, out: Path, latent_dim: int, see
     path, columns, window = _find_session(session)
 
     from portfire.dynamics import find_model
+    from portfire.errors import InputError
     from portfire.job import check_out
 
     file = find_model(model)
+    if out.resolve() == path.resolve():
+        raise InputError(f"{out}: the fit cannot go into the session itself; give another folder")
     out = check_out(out)
 
     from portfire import estimation
@@ -130,12 +140,17 @@ def fit(session: Path, model: str, account: str, out: Path, latent_dim: int, see
 
     trials = read_session(path, columns).bin(**window)
     fitted = estimation.fit(trials, model=file, account=wanted, latent_dim=latent_dim, seed=seed)
+    hazard = estimation.fit_hazard(fitted, trials)
+    if hazard is not None:
+        # Sessions that are simulated from the fit end by it.
+        fitted = estimation.with_hazard(fitted, hazard)
     fitted.save(out)
     write_line(f"account {fitted.account}, {latent_dim} latent dimensions, {len(trials)} trials")
+    write_line(f"{fitted.status}: {fitted.advice}")
     write_line(f"fit: {out}")
 
 
-@portfire.command()
+@portfire.command(short_help="Do the whole job on a session, or as a job file says.")
 @click.argument("session_or_job", type=_PATH)
 @click.option("--out", type=_PATH, help="Folder for the results. Default: fits/<session name>.")
 @_workers_option
@@ -151,18 +166,24 @@ def run(session_or_job: Path, out: Path | None, workers: int | None, quiet: bool
     _do_job(read_job(session_or_job, out), workers, quiet)
 
 
-@portfire.command()
+@portfire.command(short_help="Draw a session with known truth.")
 @click.argument("model_or_fit")
 @click.option("--out", type=_PATH, required=True, metavar="SESSION", help="Folder for the session.")
-@click.option("--trials", type=click.IntRange(min=1), default=500, show_default=True, metavar="N")
-@click.option("--units", type=click.IntRange(min=1), default=60, show_default=True, metavar="N")
+@click.option(
+    "--trials", type=click.IntRange(min=1), metavar="N", help="Default: as many as the model or fit has."
+)
+@click.option(
+    "--units", type=click.IntRange(min=1), metavar="N", help="Default: as many as the model or fit has."
+)
 @click.option(
     "--account",
     metavar="ACCOUNT",
     help="By which routes the sources push. Default: the model's or fit's own.",
 )
 @_seed_option
-def simulate(model_or_fit: str, out: Path, trials: int, units: int, account: str | None, seed: int) -> None:
+def simulate(
+    model_or_fit: str, out: Path, trials: int | None, units: int | None, account: str | None, seed: int
+) -> None:
     """Draw a session with known truth, and write the truth to truth.json.
 
     MODEL_OR_FIT is a model file, a shipped name, or the folder of a fit.

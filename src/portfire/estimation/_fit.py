@@ -215,7 +215,7 @@ def load_fit(folder: str | Path) -> Fit:
     for name in ("fit.json", "arrays.npz"):
         if not (folder / name).is_file():
             raise InputError(
-                f"{folder}: there is no {name} here; give a folder that Fit.save or a run wrote."
+                f"{folder}: there is no {name} here; give the folder of one fit."
             )
     try:
         content = json.loads((folder / "fit.json").read_text(encoding="utf-8"))
