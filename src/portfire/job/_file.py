@@ -57,7 +57,7 @@ class Compare:
     folds : int
         Number of folds.
     latent_dims : tuple of int or None
-        Numbers of latent dimensions to choose from, ascending; None: 2 to 5, as far as the units allow.
+        Numbers of latent dimensions to choose from, ascending; None: settled by `check_job`.
     min_gain : float
         A gain below this (nats/trial) is no gain worth having.
     """
@@ -173,7 +173,7 @@ def read_job(path: str | Path, out: str | Path | None = None) -> Job:
     return job
 
 
-DEFAULT_DIMS = (2, 3, 4, 5)
+DEFAULT_DIMS, FEW_UNITS = (2, 3, 4, 5), 4
 
 
 def check_job(job: Job, n_units: int, n_trials: int) -> Job:
@@ -189,8 +189,8 @@ def check_job(job: Job, n_units: int, n_trials: int) -> Job:
     Returns
     -------
     Job
-        With numbers of latent dimensions: where the job gives none, 2 to 5 but fewer than the units
-        (one dimension at least).
+        With numbers of latent dimensions: where the job gives none, 2 to 5 as far as there are units, and
+        1 too where there are fewer than four units.
 
     Raises
     ------
@@ -200,7 +200,9 @@ def check_job(job: Job, n_units: int, n_trials: int) -> Job:
     where = job.source or job.sessions[0]
     dims = job.compare.latent_dims
     if dims is None:
-        dims = tuple(d for d in DEFAULT_DIMS if d < n_units) or (1,)
+        dims = tuple(d for d in DEFAULT_DIMS if d <= n_units)
+        if n_units < FEW_UNITS:
+            dims = (1, *dims)
     if max(dims) > n_units:
         raise InputError(
             f"{where}: [compare] latent_dims goes up to {max(dims)}, but the session has {n_units} usable "

@@ -17,7 +17,7 @@ from portfire.job._shared import write_trials
 from portfire.job._stages import ALL, Size, Sizes, Stages
 from portfire.job._workspace import Workspace
 from portfire.session import Trials, read_session
-from portfire.timing import Decoding, decode
+from portfire.timing import Decoding, decode, round_cutoff
 
 N_PARTS = 4
 
@@ -137,7 +137,7 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
             name: np.stack([arrays[f"{name}_{position}"] for arrays in read])
             for name in ("initial", "sustained", "state")
         }
-        last = trials.n_before + round(cutoff / trials.bin_s)
+        last = trials.n_before + round_cutoff(cutoff, trials.bin_s)[0]
         features = {"initial": by_name["initial"]}
         if cutoff > 0:
             features["sustained"] = by_name["sustained"]
