@@ -146,6 +146,13 @@ def test_run_does_the_job_and_draws_the_report(portfire, session, tmp_path, quic
     ]
 
 
+def test_every_session_of_a_job_gets_its_report(portfire, session, tmp_path, quick_job, monkeypatch):
+    rows = [{"session": name, "folder": name} for name in ("monday", "other")]
+    monkeypatch.setattr(job, "run", lambda wanted, **_: Result(wanted.out, {**RAW, "sessions": rows}))
+    assert portfire("run", session, "--out", tmp_path / "o")[0] == 0
+    assert quick_job == [tmp_path / "o" / "monday", tmp_path / "o" / "other", tmp_path / "o"]
+
+
 def test_demo_makes_its_session_and_a_job_file_to_copy(portfire, tmp_path, quick_job, monkeypatch):
     simulate = types.ModuleType("portfire.simulate")
     simulate.write_demo_session = lambda out, seed: Path(out).mkdir()

@@ -72,6 +72,15 @@ def test_a_result_reads_as_a_few_lines(folder):
     ]
 
 
+def test_rows_of_several_sessions_say_whose_they_are(tmp_path):
+    rows = [{"session": name, "source": "trial", "verdict": "initial"} for name in ("monday", "tuesday")]
+    write_json_atomic(tmp_path / "result.json", {"accounts": [], "contrasts": rows, "decode": []})
+    assert str(load_result(tmp_path)).splitlines() == [
+        "monday, trial: verdict initial",
+        "tuesday, trial: verdict initial",
+    ]
+
+
 def test_folders_without_a_finished_run_are_named(tmp_path, folder):
     with pytest.raises(InputError, match="nowhere: does not exist"):
         load_result(tmp_path / "nowhere")

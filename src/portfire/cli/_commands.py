@@ -221,6 +221,8 @@ def _do_job(job: Job, workers: int | None, quiet: bool) -> None:
 
     from portfire.report import draw_report
 
+    for row in result.raw.get("sessions", []):
+        draw_report(job.out / row["folder"])
     draw_report(job.out)
     write_line(str(result))
     write_line(f"results: {job.out / 'result.json'}")

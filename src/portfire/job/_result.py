@@ -117,7 +117,8 @@ def summarise(raw: Mapping[str, Any]) -> list[str]:
     lines = []
     for row in raw["contrasts"]:
         told = row.get("words") or f"verdict {row['verdict']}"
-        lines.append(f"{row['source']}: {told}")
+        whose = f"{row['session']}, " if "session" in row else ""
+        lines.append(f"{whose}{row['source']}: {told}")
     shown: dict[float, Mapping[str, Any]] = {}
     for row in raw["decode"]:
         if row.get("variant", "all") != "all" or row["features"] != "initial+sustained":
