@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
+from zipfile import BadZipFile
 
 import numpy as np
 
@@ -95,7 +96,7 @@ class Fit:
         return STATUS_WORDS[self.status]
 
     def check(self, trials: Trials) -> None:
-        """Refuse trials of other units, bins or contexts than those of the fit."""
+        """Refuse trials of other units, bins, contexts or scales than those of the fit."""
         mine = self.session
         if list(trials.unit) != mine["units"]:
             raise InputError("these trials have other units than the fit; bin them from the same session.")
@@ -107,6 +108,13 @@ class Fit:
         if list(trials.contexts) != mine["contexts"]:
             raise InputError(
                 f"these trials have the contexts {list(trials.contexts)}, the fit {mine['contexts']}."
+            )
+        scales = (trials.sample_center, trials.sample_scale), (mine["sample_center"], mine["sample_scale"])
+        if not np.allclose(*scales):
+            raise InputError(
+                "these trials have another mean and spread of the sample interval "
+                f"({scales[0][0]:.4g} and {scales[0][1]:.4g} s) than the fit ({scales[1][0]:.4g} and "
+                f"{scales[1][1]:.4g} s), and pushes are in these units; bin them from the same session."
             )
 
     def score(self, trials: Trials) -> pd.DataFrame:
@@ -214,15 +222,14 @@ def load_fit(folder: str | Path) -> Fit:
     folder = Path(folder)
     for name in ("fit.json", "arrays.npz"):
         if not (folder / name).is_file():
-            raise InputError(
-                f"{folder}: there is no {name} here; give the folder of one fit."
-            )
+            raise InputError(f"{folder}: there is no {name} here; give the folder of one fit.")
     try:
         content = json.loads((folder / "fit.json").read_text(encoding="utf-8"))
-        with np.load(folder / "arrays.npz", allow_pickle=False) as stored:
+        # Opened here, since NumPy leaves a file that it cannot read open.
+        with open(folder / "arrays.npz", "rb") as file, np.load(file, allow_pickle=False) as stored:
             arrays = {name: stored[name] for name in stored.files}
         return fit_from_parts(content, arrays)
-    except (ValueError, KeyError, TypeError, OSError) as error:
+    except (ValueError, KeyError, TypeError, OSError, EOFError, BadZipFile) as error:
         raise InputError(f"{folder}: this fit cannot be read ({error}); fit again.") from error
 
 

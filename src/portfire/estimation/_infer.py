@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from math import floor
+
 import jax.numpy as jnp
 import numpy as np
 import xarray as xr
@@ -14,10 +16,10 @@ from portfire.session import Trials
 
 
 def causal_mask(trials: Trials, until_s: float | None) -> np.ndarray:
-    """Bins that end at or before ``until_s`` seconds after the set cue (whole bins), with the run-up."""
+    """Bins up to ``until_s`` seconds after the set cue (rounded to whole bins, halves up), and the run-up."""
     if until_s is None:
         return trials.mask
-    last = trials.n_before + round(until_s / trials.bin_s)
+    last = trials.n_before + floor(until_s / trials.bin_s + 0.5 + 1e-9)
     if last < 1:
         raise InputError(f"until_s = {until_s} leaves no bin; give a later time, or bin with a run-up.")
     mask = trials.mask.copy()
