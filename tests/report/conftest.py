@@ -186,6 +186,7 @@ def invent_decode(what: Invention) -> list[dict[str, Any]]:
                         "ci95": [r2 - 0.05, r2 + 0.05],
                         "p": 0.001 if r2 > 0.05 else 0.21,
                         "null95": [-0.03, 0.02],
+                        "r2_window": r2 - 0.01,
                         "null_draws": 320,
                     }
                 )
@@ -210,6 +211,8 @@ def invent_contrasts(what: Invention) -> list[dict[str, Any]]:
             "verdict": "undetermined",
             "open": ["sustained"],
             "trials_to_close": 1400,
+            "words": "Between contexts, these data cannot tell: a sustained push gains 0.06 nats a trial and "
+            "stays open; about 1367 trials would settle it if the gain stays as it is.",
             "mimic": "A slow mode (time constant 1.9 s) can carry an initial push almost to the response, "
             "where it looks like a sustained one.",
         },
@@ -222,11 +225,44 @@ def invent_contrasts(what: Invention) -> list[dict[str, Any]]:
     }
     more = {
         "at_dims": {"2": "undetermined", "4": "sustained"},
-        "lr": {r: {"stat": 31.2, "df": 3, "p_raw": 0.0004} for r in ("initial", "sustained", "total")},
-        "gain_k": {"initial": 3, "sustained": 3, "total": 6},
+        "ends_nats": {"2": 3.0, "3": 41.2, "4": 12.6},
+        "carrying_mode": 1.9,
+        "lr": {
+            r: {"stat": 31.2, "df": 3, "p_raw": 0.0004}
+            for r in ("initial_unique", "sustained_unique", "total")
+        },
+        "gain_k": {"initial_unique": 3, "sustained_unique": 3, "total": 6},
     }
     scores = {"none": -823.1, "initial": -821.0, "sustained": -820.2, "both": -820.1}
     return [{"source": s} | scores | known[s] | more for s in what.sources]
+
+
+def invent_choice(what: Invention) -> dict[str, Any]:
+    size = {"model": what.models[0], "latent_dim": what.n_latents, "drift": True}
+    smaller = size | {"latent_dim": what.n_latents - 1}
+    return size | {
+        "by_fold": [size, size, smaller, size, size],
+        "candidates": [
+            smaller | {"deficit_nats_per_trial": 2.345, "deficit_se": 0.21},
+            size | {"deficit_nats_per_trial": 0.0, "deficit_se": 0.0},
+        ],
+    }
+
+
+def invent_predictions(rng: np.random.Generator, what: Invention, trials: pd.DataFrame) -> pd.DataFrame:
+    log_s = np.log(trials["produced_s"])
+    baseline = log_s.groupby(trials["condition"]).transform("mean")
+    rows = [
+        trials[["trial", "condition", "fold", "produced_s"]].assign(
+            cutoff_s=cutoff,
+            features=features,
+            baseline_s=np.exp(baseline),
+            predicted_s=np.exp(baseline + 0.2 * (log_s - baseline) + 0.02 * rng.standard_normal(len(trials))),
+            variant="all",
+        )
+        for cutoff, features in product(what.cutoffs, FEATURES)
+    ]
+    return pd.concat(rows, ignore_index=True)
 
 
 def invent_result(what: Invention, trials: pd.DataFrame, scores: pd.DataFrame) -> dict[str, Any]:
@@ -269,7 +305,7 @@ def invent_result(what: Invention, trials: pd.DataFrame, scores: pd.DataFrame) -
             "digest": "sha256:" + "0123456789abcdef" * 4,
         },
         "behaviour": {"conditions": conditions, "weber_fraction": 0.11 if what.responses else None},
-        "chosen": {"model": what.models[0], "latent_dim": what.n_latents, "by_fold": [3, 3, 2, 3, 3]},
+        "chosen": invent_choice(what),
         "accounts": accounts,
         "contrasts": invent_contrasts(what),
         "decode": invent_decode(what) if what.responses else [],
@@ -295,13 +331,7 @@ def write_invented(out: Path, what: Invention) -> Path:
     (out / "result.json").write_text(json.dumps(result), encoding="utf-8")
     trials.to_parquet(out / "trials.parquet")
     scores.to_parquet(out / "scores.parquet")
-    rows = [
-        trials[["trial", "condition", "fold", "produced_s"]].assign(
-            cutoff_s=cutoff, features=features, baseline_s=0.7, predicted_s=0.7
-        )
-        for cutoff, features in product(what.cutoffs, FEATURES)
-    ]
-    pd.concat(rows, ignore_index=True).to_parquet(out / "decode.parquet")
+    invent_predictions(rng, what, trials).to_parquet(out / "decode.parquet")
     invent_latents(rng, what, trials).to_netcdf(out / "latents.nc", engine="h5netcdf")
     invent_rates(rng, what, trials).to_netcdf(out / "rates.nc", engine="h5netcdf")
     return out

@@ -13,10 +13,19 @@ import xarray as xr
 
 from portfire.report._accounts import compare_scores
 from portfire.report._folder import read_run_folder
-from portfire.report._pushes import center_within
+from portfire.report._paths import find_end
+from portfire.report._predicted import average_groups, choose_row
+from portfire.report._pushes import center_within, share_of_first
 from portfire.report._rates import average_bins, check_rates
 from portfire.report._style import COLOURS, assign_looks, clean, shorten, spread_evenly
-from portfire.report._words import join_words, round_trials, write_number, write_p
+from portfire.report._words import (
+    join_words,
+    round_trials,
+    state_dims,
+    state_evidence,
+    write_number,
+    write_p,
+)
 
 
 def test_scores_are_paired_over_trials(tmp_path: Path) -> None:
@@ -91,6 +100,100 @@ def test_bins_are_pooled_with_their_weights() -> None:
     np.testing.assert_allclose(average_bins(values, weight, 2), [2.5, 5.0, np.nan])
 
 
+def test_misfit_of_a_right_model_has_the_spread_that_is_drawn() -> None:
+    rng = np.random.default_rng(2)
+    n_running, bin_s = 5, 0.02
+    model = rng.uniform(2, 30, (3, 40, 2000))
+    recorded = rng.poisson(model * bin_s * n_running) / (bin_s * n_running)
+    dims = ("condition", "time", "unit")
+    rates = xr.Dataset(
+        {
+            "recorded": (dims, recorded),
+            "model": (dims, model),
+            "n_running": (dims[:2], np.full((3, 40), n_running)),
+        },
+        coords={"time": np.arange(40) * bin_s},
+    )
+    check = check_rates(rates)
+    assert check is not None
+    assert check.spread_by_unit is not None
+    assert check.spread_by_time is not None
+    scores = (check.by_unit - 1) / check.spread_by_unit
+    assert scores.std() == pytest.approx(1, abs=0.08)  # five standard errors of an SD over 2,000 units
+    assert np.abs((check.by_time - 1) / check.spread_by_time).max() < 4
+    assert check.by_time.shape == (20,)
+
+
+def test_predictions_are_averaged_in_groups_of_like_size() -> None:
+    x = np.arange(12.0)[::-1]
+    centres, means, errors = average_groups(x, 2 * x + 1)
+    np.testing.assert_allclose(centres, [2.5, 8.5])
+    np.testing.assert_allclose(means, [6.0, 18.0])
+    np.testing.assert_allclose(errors, 2 * np.sqrt(3.5 / 6))  # 0 … 5 has a variance of 3.5
+
+
+def test_best_features_at_the_middle_cutoff(result_only: Callable[[], Path]) -> None:
+    row = choose_row(read_run_folder(result_only()))
+    assert row is not None
+    assert (row["cutoff_s"], row["features"], row["variant"]) == (0.1, "state", "all")
+
+
+def test_time_axis_ends_where_few_trials_are_left() -> None:
+    time, produced = np.arange(100) * 0.02, np.linspace(0.5, 1.5, 101)
+    mean = np.where(time[:, None] < 0.9, 1.0, np.nan)
+    assert find_end(time, produced, [("a", 0.8, mean)]) == pytest.approx(1.45)
+    assert find_end(time, produced, [("a", 0.8, np.ones((100, 1)))]) == pytest.approx(2.01)
+    assert find_end(time, np.full(3, np.nan), [("a", np.nan, mean)]) == pytest.approx(1.98)
+
+
+def test_direction_of_single_trials() -> None:
+    along = np.outer(np.arange(-3.0, 4.0), [3.0, 4.0])
+    assert share_of_first(along) == pytest.approx(1.0)
+    assert share_of_first(np.array([[1.0, 0], [-1, 0], [0, 1], [0, -1]])) == pytest.approx(0.5)
+    assert share_of_first(np.zeros((4, 2))) is None
+
+
+def test_why_a_verdict_stands() -> None:
+    contrast = {"verdict": "initial", "at_dims": {"2": "both", "4": "initial"}}
+    assert state_dims(contrast, 3) == (
+        "With 4 latent dimensions the verdict is the same, with 2 it is both. "
+        "It stands, because it holds with 4; fewer are reported and do not overrule."
+    )
+    contrast = {"verdict": "initial", "at_dims": {"2": "initial", "4": "undetermined"}}
+    ends = {"ends_nats": {"2": -37.0, "3": -176.0, "4": -124.8}}
+    assert state_dims(contrast | ends, 3) == (
+        "With 2 latent dimensions the verdict is the same, with 4 it is undetermined. It stands, because at "
+        "3 and at 4 the account with the initial push alone is ahead of the one with the sustained push "
+        "alone, by 176 and 125 nats on all trials."
+    )
+    assert str(state_dims(contrast, 3)).endswith("The result does not say why it stands.")
+    assert state_dims({"verdict": "both", "at_dims": {"2": "both"}}, 3) == (
+        "With 2 latent dimensions the verdict is the same. It was not checked with 4 latent dimensions."
+    )
+    undetermined = {"verdict": "undetermined", "at_dims": {"2": "both", "4": "initial"}}
+    assert (
+        state_dims(undetermined, 3) == "With 2 latent dimensions the verdict is both, with 4 it is initial."
+    )
+    assert state_dims({"verdict": "both"}, 3) is None
+
+
+def test_evidence_names_the_bound_of_the_route_that_is_not_needed() -> None:
+    def entry(value: float, low: float, high: float, p: float) -> dict[str, object]:
+        return {"nats_per_trial": value, "ci95": [low, high], "p": p}
+
+    contrast = {
+        "verdict": "sustained",
+        "initial_unique": entry(-0.0101, -0.0253, 0.005, 1.0),
+        "sustained_unique": entry(1.272, 1.127, 1.417, 1e-9),
+    }
+    text = str(state_evidence(contrast, 0.05)).replace("\u00a0", " ")
+    assert text == (
+        "Held out, a trial loses 1.27 nats without the sustained route (95 % CI 1.13 to 1.42; p < 0.001) and "
+        "−0.010 nats without the initial route (95 % CI −0.025 to 0.005; p = 1.00). The initial route is not "
+        "needed beside it: it adds at most 0.005 nats a trial, less than 0.05."
+    )
+
+
 def test_numbers_in_words() -> None:
     assert write_number(-0.004) == "0.00"
     assert write_number(-1.5) == "−1.50"
@@ -163,6 +266,6 @@ def test_colours_are_told_apart_by_every_sight(sight: str) -> None:
 
 def test_folder_knows_its_contexts_and_samples(small: Callable[..., Path]) -> None:
     run = read_run_folder(small(contexts=("b", "a"), samples=(0.9, 0.5)))
-    assert run.contexts == ("a", "b")
+    assert run.contexts == ("b", "a")  # by mean produced interval
     assert run.samples == (0.5, 0.9)
     assert run.has_responses

@@ -28,7 +28,16 @@ from portfire.report._style import (
     shorten,
     write_svg,
 )
-from portfire.report._words import MINUS, join_words, write_interval, write_number, write_p_value, write_short
+from portfire.report._words import (
+    MINUS,
+    join_words,
+    name_source,
+    pick_digits,
+    write_interval,
+    write_number,
+    write_p_value,
+    write_short,
+)
 
 ENTRY_LOOKS = {
     "total": ("total (both routes)", Look(INK, "D", "-")),
@@ -57,12 +66,12 @@ def draw_contrasts(run: RunFolder) -> Drawn | Absent:
             if not isinstance(entry, Mapping) or entry.get("nats_per_trial") is None:
                 continue
             extent += _draw_entry(axes, entry, row + offset, look, run.level)
-            parts.append(
-                f"{words} {write_number(entry['nats_per_trial'])} ({write_interval(entry.get('ci95'))})"
-            )
-        source = shorten(contrast.get("source"))
+            digits = pick_digits(entry["nats_per_trial"], *(entry.get("ci95") or []))
+            value = write_number(entry["nats_per_trial"], digits)
+            parts.append(f"{words} {value} ({write_interval(entry.get('ci95'), digits)})")
+        source = shorten(name_source(contrast))
         alts.append(f"{source}: {'; '.join(parts)}; verdict {contrast.get('verdict')}")
-    names = [f"{shorten(c.get('source'))}\n{shorten(c.get('verdict'))}" for c in contrasts]
+    names = [f"{shorten(name_source(c))}\nverdict: {shorten(c.get('verdict'))}" for c in contrasts]
     axes.set_yticks(range(len(contrasts)), names)
     axes.tick_params(axis="y", length=0)
     axes.set_ylim(len(contrasts) - 0.5, -0.5)
@@ -84,9 +93,9 @@ def draw_contrasts(run: RunFolder) -> Drawn | Absent:
     )
     caption = (
         "Unique is what held-out trials lose when one route is taken from the full account, total when "
-        "both are; lines are 95 % intervals. A filled mark has an adjusted p (Holm over all marks) at or "
-        f"below {run.level:g}. The dashed line is the smallest gain worth having, {run.min_gain:g} nats a "
-        "trial."
+        "both are; lines are 95 % intervals (where none shows it is narrower than its mark). A filled "
+        f"mark has an adjusted p (Holm over all marks) at or below {run.level:g}. The dashed line is "
+        f"the smallest gain worth having, {run.min_gain:g} nats a trial."
     )
     return Drawn(key, title, write_svg(figure, key, title, alt), alt, caption)
 
@@ -240,7 +249,7 @@ def tabulate_contrasts(run: RunFolder) -> list[list[str]]:
             ratio = (contrast.get("lr") or {}).get(route) or (contrast.get("lr") or {}).get(name) or {}
             statistic = f"{write_short(ratio.get('stat'))} ({ratio.get('df')} df)" if ratio else "not given"
             rows.append(
-                [str(contrast.get("source")), words, write_number(entry.get("nats_per_trial"), 3),
+                [name_source(contrast), words, write_number(entry.get("nats_per_trial"), 3),
                  write_interval(entry.get("ci95"), 3), statistic, write_p_value(entry.get("p"))]
             )  # fmt: skip
     return rows
@@ -256,5 +265,5 @@ def describe_levels(run: RunFolder) -> str:
             if contrast.get(route) is not None
         ]
         if four:
-            parts.append(f"{contrast.get('source')}: {join_words(four)}")
+            parts.append(f"{name_source(contrast)}: {join_words(four)}")
     return "; ".join(parts)

@@ -11,8 +11,10 @@ from portfire.report._decode import draw_decode
 from portfire.report._folder import read_run_folder
 from portfire.report._page import write_page
 from portfire.report._paths import draw_paths
+from portfire.report._predicted import draw_predicted
 from portfire.report._pushes import draw_pushes
-from portfire.report._rates import draw_rates_overall, draw_rates_units
+from portfire.report._rates import draw_rates_overall
+from portfire.report._rates_units import draw_rates_units
 from portfire.report._style import Drawn, figure_style
 
 _FIGURES = (
@@ -22,6 +24,7 @@ _FIGURES = (
     draw_paths,
     draw_pushes,
     draw_decode,
+    draw_predicted,
     draw_rates_units,
     draw_rates_overall,
 )
@@ -33,8 +36,8 @@ def draw_report(out_dir: Path) -> Path:
     Parameters
     ----------
     out_dir : Path
-        The out folder: `result.json`, and where present `scores.parquet`, `latents.nc`, `trials.parquet` and
-        `rates.nc`. What is absent is said on the page, with the reason.
+        The out folder: `result.json`, and where present `scores.parquet`, `decode.parquet`, `latents.nc`,
+        `trials.parquet` and `rates.nc`. What is absent is said on the page, with the reason.
 
     Returns
     -------

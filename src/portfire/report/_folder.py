@@ -18,12 +18,21 @@ from portfire.errors import InputError
 _COLUMNS = {
     "trials.parquet": ("trial", "condition", "produced_s"),
     "scores.parquet": ("trial", "account", "model", "loglik"),
+    "decode.parquet": (
+        "trial",
+        "condition",
+        "cutoff_s",
+        "features",
+        "produced_s",
+        "baseline_s",
+        "predicted_s",
+    ),
 }
 _VARIABLES = {
     "latents.nc": {"state": 3, "initial": 2, "sustained": 2},
     "rates.nc": {"recorded": 3, "model": 3},
 }
-_LISTS = ("accounts", "contrasts", "decode")
+_LISTS = ("accounts", "contrasts", "decode", "sessions")
 
 
 @dataclass(frozen=True)
@@ -35,7 +44,8 @@ class RunFolder:
     path : Path
     result : mapping
         The content of `result.json`.
-    trials, scores : DataFrame or None
+    trials, scores, predictions : DataFrame or None
+        `trials.parquet`, `scores.parquet` and `decode.parquet`.
     latents, rates : xarray.Dataset or None
     """
 
@@ -43,15 +53,18 @@ class RunFolder:
     result: Mapping[str, Any]
     trials: pd.DataFrame | None
     scores: pd.DataFrame | None
+    predictions: pd.DataFrame | None
     latents: xr.Dataset | None
     rates: xr.Dataset | None
 
     @cached_property
     def contexts(self) -> tuple[str, ...]:
-        """The contexts of the used trials, sorted; empty where the session has none."""
+        """The contexts of the used trials, by mean produced interval; empty where the session has none."""
         if self.trials is None or not has_values(self.trials, "context"):
             return ()
-        return tuple(sorted(self.trials["context"].dropna().astype(str).unique()))
+        known = self.trials[self.trials["context"].notna()]
+        mean = known.groupby(known["context"].astype(str))["produced_s"].mean()
+        return tuple(sorted(mean.index, key=lambda c: (np.nan_to_num(mean[c], nan=np.inf), c)))
 
     @cached_property
     def samples(self) -> tuple[float, ...]:
@@ -132,6 +145,7 @@ def read_run_folder(out_dir: Path) -> RunFolder:
         result=_read_result(out_dir),
         trials=_read_table(out_dir / "trials.parquet"),
         scores=_read_table(out_dir / "scores.parquet"),
+        predictions=_read_table(out_dir / "decode.parquet"),
         latents=_read_arrays(out_dir / "latents.nc"),
         rates=_read_arrays(out_dir / "rates.nc"),
     )

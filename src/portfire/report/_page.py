@@ -10,6 +10,7 @@ from jinja2 import Environment, StrictUndefined
 
 from portfire.report import _tables, _words
 from portfire.report._accounts import describe_levels
+from portfire.report._decode_words import state_decode
 from portfire.report._folder import RunFolder
 from portfire.report._rates import state_rates
 from portfire.report._style import Absent, Drawn, clean
@@ -22,20 +23,24 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
         autoescape=True, undefined=StrictUndefined, finalize=_finalize, trim_blocks=True, lstrip_blocks=True
     )
     template = environment.from_string(here.joinpath("page.html").read_text(encoding="utf-8"))
-    session, chosen = run.part("session"), run.part("chosen")
+    session = run.part("session")
     return template.render(
         style=here.joinpath("page.css").read_text(encoding="utf-8"),
         title=_title(run),
         facts=_list_facts(run),
         verdicts=[_card(c, run, session.get("trials_used")) for c in run.rows("contrasts")],
         untested=_words.explain_untested(run),
-        decode_sentence=_words.state_decode(run),
-        rates_sentence=state_rates(run),
+        decode_sentences=state_decode(run),
+        rates_sentences=state_rates(run),
         levels=describe_levels(run),
+        by_time=_words.state_time(run),
+        by_fold=_words.state_by_fold(run),
         figures={key: _as_dict(figure) for key, figure in figures.items()},
         tables={
             "contrasts": _tables.list_contrasts(run),
+            "dims": _tables.list_dims(run),
             "accounts": _tables.list_accounts(run),
+            "sizes": _tables.list_sizes(run),
             "behaviour": _tables.list_behaviour(run),
             "relations": _tables.list_relations(run),
             "decode": _tables.list_decode(run),
@@ -43,9 +48,8 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
             "settings": _tables.list_settings(run),
         },
         weber=_state_weber(run),
-        chosen=chosen,
         warnings=[str(w) for w in run.result.get("warnings") or []],
-        not_run=[str(s) for s in run.result.get("not_run") or []],
+        not_run=_list_not_run(run),
         version=run.result.get("portfire"),
     )
 
@@ -69,28 +73,42 @@ def _as_dict(figure: Drawn | Absent) -> dict[str, Any]:
 def _list_facts(run: RunFolder) -> list[tuple[str, str]]:
     session, chosen = run.part("session"), run.part("chosen")
     facts = [
-        ("trials used", session.get("trials_used")),
-        ("units used", session.get("units_used")),
+        ("trials used", _count_used(session, "trials")),
+        ("units used", _count_used(session, "units")),
         ("conditions", session.get("conditions")),
         ("model", chosen.get("model")),
         ("latent dimensions", chosen.get("latent_dim")),
         ("seed", run.result.get("seed")),
+        ("sessions", len(run.rows("sessions")) or None),
     ]
+    facts = [(name, value) for name, value in facts if value is not None]
     return [(name, _tables.write_plain(value)) for name, value in facts]
+
+
+def _list_not_run(run: RunFolder) -> list[str]:
+    """Return what was not run, without the sources, whose absence stands among the verdicts."""
+    absent = tuple(f"The source {source} is not contrasted" for source in _words.SUBJECTS)
+    return [text for text in map(str, run.result.get("not_run") or []) if not text.startswith(absent)]
+
+
+def _count_used(session: Mapping[str, Any], kind: str) -> str | None:
+    used, left_out = session.get(f"{kind}_used"), session.get(f"{kind}_left_out")
+    return f"{used}, {len(left_out)} left out" if used is not None and left_out else used
 
 
 def _card(contrast: Mapping[str, Any], run: RunFolder, n_used: int | None) -> dict[str, Any]:
     return {
-        "source": contrast.get("source"),
+        "source": _words.name_source(contrast),
         "verdict": contrast.get("verdict"),
         "sentence": _words.state_verdict(contrast, run.min_gain),
         "notes": [
             note
             for note in (
+                _words.state_reason(contrast),
                 _words.state_open(contrast, n_used),
-                _words.state_evidence(contrast),
+                _words.state_evidence(contrast, run.min_gain),
                 contrast.get("mimic"),
-                _words.state_dims(contrast),
+                _words.state_dims(contrast, run.part("chosen").get("latent_dim")),
             )
             if note
         ],

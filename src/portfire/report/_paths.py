@@ -48,14 +48,16 @@ def draw_paths(run: RunFolder) -> Drawn | Absent:
     shown = _pick_trials(len(table))
     looks = assign_looks(run.contexts or ("all trials",))
     means = _average_conditions(state, table)
-    figure = make_figure(0.75 + 4.3 * blocks)
+    figure = make_figure(0.9 + 5.0 * blocks)
+    end = find_end(time, produced, means)
+    median = float(np.nanmedian(produced)) if timed else None
     grid = figure.subplots(2 * blocks, columns, squeeze=False, sharex=True)
     for latent in range(n_latents):
         block, column = divmod(latent, columns)
         singles, averages = grid[2 * block, column], grid[2 * block + 1, column]
         paths = [np.column_stack([time, state[i, :, latent]]) for i in shown]
         tint = [colours(norm(produced[i])) if np.isfinite(produced[i]) else SOFT for i in shown]
-        singles.add_collection(LineCollection(paths, colors=tint, linewidths=0.7, alpha=0.6))
+        singles.add_collection(LineCollection(paths, colors=tint, linewidths=0.8, alpha=0.6))
         singles.autoscale_view()
         for context, interval, mean in means:
             colour = colours(norm(interval)) if np.isfinite(interval) else SOFT
@@ -66,6 +68,9 @@ def draw_paths(run: RunFolder) -> Drawn | Absent:
         singles.set_title(f"latent {latent + 1}")
         for axes in (singles, averages):
             add_zero_line(axes, vertical=False)
+            axes.set_xlim(0, end)
+            if median is not None:
+                axes.axvline(median, color=SOFT, linestyle=(0, (4, 3)), linewidth=1, zorder=0.6)
         averages.tick_params(labelbottom=True)
         averages.set_xlabel("time from the set cue (s)")
     for block in range(blocks):
@@ -77,17 +82,28 @@ def draw_paths(run: RunFolder) -> Drawn | Absent:
     if timed:
         mappable = ScalarMappable(norm, colours)
         figure.colorbar(mappable, ax=grid, label="produced interval (s)", extend="both", aspect=40, pad=0.015)
+    if median is not None:
+        grid[0, 0].annotate(
+            f"median {median:.2f} s", (median, 1), xycoords=("data", "axes fraction"), xytext=(3, -2),
+            textcoords="offset points", fontsize=8.5, color=SOFT, va="top",
+        )  # fmt: skip
     if len(run.contexts) > 1:
         _add_context_lines(figure, run.contexts)
-    alt = _describe_paths(means, time, len(shown), len(table))
+    alt = _describe_paths(means, end, len(shown), len(table))
     drawn = "All" if len(shown) == len(table) else f"{len(shown)} of"
     left = (
         f" The first {n_latents} of {state.shape[2]} latents are drawn." if state.shape[2] > n_latents else ""
     )
     colour = "colour is the produced interval" if timed else "grey, since no trial has a response"
+    mark = (
+        " The dashed line is the median produced interval; time is drawn until one trial in twenty is left."
+        if timed
+        else ""
+    )
     caption = (
         f"{drawn} {len(table)} trials (thin, evenly picked), smoothed with all spikes of the trial, and the "
-        f"mean of each condition over the trials still running, drawn while half of them run; {colour}. "
+        f"mean of each condition over the trials still running, drawn while half of them run; "
+        f"{colour}.{mark} "
         "Latents have orthonormal readout columns, the first explains most; their signs are a "
         f"convention.{left}"
     )
@@ -96,6 +112,15 @@ def draw_paths(run: RunFolder) -> Drawn | Absent:
 
 def _pick_trials(n: int) -> np.ndarray:
     return np.unique(np.linspace(0, n - 1, min(n, MAX_PATHS)).round().astype(int))
+
+
+def find_end(time: np.ndarray, produced: np.ndarray, means: list[tuple[str, float, np.ndarray]]) -> float:
+    """Return where the time axis ends (s): where one trial in twenty is left, and no mean is cut."""
+    last = max((float(time[_find_last(mean[:, 0])]) for _, _, mean in means), default=0.0)
+    known = produced[np.isfinite(produced)]
+    if not len(known):
+        return float(time[-1]) or 1.0
+    return max(last + 0.03, min(float(time[-1]), float(np.quantile(known, 0.95)))) or 1.0
 
 
 def _find_last(values: np.ndarray) -> int:
@@ -130,7 +155,7 @@ def _add_context_lines(figure: Figure, contexts: tuple[str, ...]) -> None:
     )  # fmt: skip
 
 
-def _describe_paths(means: list[tuple[str, float, np.ndarray]], time: np.ndarray, shown: int, n: int) -> str:
+def _describe_paths(means: list[tuple[str, float, np.ndarray]], end: float, shown: int, n: int) -> str:
     start = np.array([mean[0] for _, _, mean in means])
     parts = [f"{len(means)} condition means and {shown} of {n} single trials, smoothed latent state by time"]
     low, high = np.nanmin(start, axis=0), np.nanmax(start, axis=0)
@@ -147,5 +172,5 @@ def _describe_paths(means: list[tuple[str, float, np.ndarray]], time: np.ndarray
             "Over conditions, latent 1 at the set cue goes with the mean produced interval at r = "
             f"{write_number(r)}"
         )
-    parts.append(f"Time runs to {write_number(time[-1])} s")
+    parts.append(f"Time runs to {write_number(end)} s")
     return ". ".join(parts) + "."

@@ -25,7 +25,8 @@ from portfire.report._words import join_words, write_number
 
 MAX_COLUMNS = 3
 PUSHES = ("initial", "sustained")
-PUSH_UNITS = {"initial": "log rate", "sustained": "log rate/bin"}
+PUSH_UNITS = {"initial": "log rate", "sustained": "log rate in a trial"}
+SIZES = (8.0, 34.0)  # marks of the shortest and the longest sample interval
 
 
 def draw_pushes(run: RunFolder) -> Drawn | Absent:
@@ -44,12 +45,13 @@ def draw_pushes(run: RunFolder) -> Drawn | Absent:
     figure = make_figure(0.6 + 2.75 * n_rows, 8.7 if columns > 1 else 5.5)
     grid = figure.subplots(n_rows, columns, squeeze=False)
     centred = center_within(table, pushes) if within is not None else None
+    size = size_marks(table, run.samples)
     for latent in range(columns):
         axes = grid[0, latent]
         for name in groups:
             rows = group == name
             axes.scatter(
-                *(pushes[push][rows, latent] for push in PUSHES), s=15, marker=looks[name].marker,
+                *(pushes[push][rows, latent] for push in PUSHES), s=size[rows], marker=looks[name].marker,
                 color=looks[name].colour, alpha=0.55, linewidths=0,
             )  # fmt: skip
         _draw_uncertainty(axes, run.latents, latent)
@@ -78,17 +80,49 @@ def draw_pushes(run: RunFolder) -> Drawn | Absent:
     left = f" The first {columns} of {more} latents are drawn." if more > columns else ""
     below = (
         " Below, within conditions: each push less its condition's mean, against log produced interval "
-        "less its condition's mean over its SD, with the least-squares line. Pushes are estimated from all "
-        "spikes of a trial, so this describes; the test is under Prediction, from spikes up to a cutoff "
-        "only."
-        if within is not None
+        f"less its condition's mean over its SD, with the least-squares line.{_say_rank(centred)} Pushes are "
+        "estimated from all spikes of a trial, so this describes; the test is under Prediction, from spikes "
+        "up to a cutoff only."
+        if within is not None and centred is not None
         else " No relation to the produced interval is drawn: too few trials have a response."
     )
     caption = (
-        "Top: posterior means of both pushes of each trial; the grey cross is ±1 posterior SD of the "
-        f"median trial.{below}{left}"
+        "Top: posterior means of both pushes of each trial"
+        + (", larger marks for longer sample intervals" if len(run.samples) > 1 else "")
+        + "; the grey cross is ±1 posterior SD of the median trial. The initial push is read as the state at "
+        "the set cue, the sustained push as its input summed over a trial of median length; both hold what "
+        f"the condition adds and what the trial adds.{below}{left}"
     )
     return Drawn(key, title, write_svg(figure, key, title, alt), alt, caption)
+
+
+def size_marks(table: pd.DataFrame, samples: tuple[float, ...]) -> np.ndarray:
+    """Return the area of each trial's mark, from the shortest sample interval to the longest."""
+    if len(samples) < 2:
+        return np.full(len(table), 15.0)
+    share = (table["sample_s"].to_numpy(float) - samples[0]) / (samples[-1] - samples[0])
+    return np.asarray(SIZES[0] + np.nan_to_num(share, nan=0.5) * (SIZES[1] - SIZES[0]))
+
+
+def share_of_first(centred: np.ndarray) -> float | None:
+    """Return the share of variance that the first direction of (trial, latent) deviations holds."""
+    used = centred[np.isfinite(centred).all(axis=1)]
+    variances = np.linalg.svd(used, compute_uv=False) ** 2
+    return float(variances[0] / variances.sum()) if variances.sum() > 0 else None
+
+
+def _say_rank(centred: dict[str, np.ndarray] | None) -> str:
+    parts = []
+    for name in PUSHES:
+        push = centred[name] if centred is not None else np.empty((0, 0))
+        if push.shape[1] > 1 and (share := share_of_first(push)) is not None and share > 0.995:
+            parts.append(name)
+    if not parts:
+        return ""
+    return (
+        f" Within conditions the {join_words(parts)} push varies along one direction only, so its panels "
+        "repeat one another."
+    )
 
 
 def center_within(table: pd.DataFrame, pushes: dict[str, np.ndarray]) -> dict[str, np.ndarray]:

@@ -3,30 +3,30 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
-import pandas as pd
 import xarray as xr
+from matplotlib.axes import Axes
 from matplotlib.colors import ListedColormap, LogNorm
-from matplotlib.lines import Line2D
+from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, LogLocator, MaxNLocator, NullFormatter
 
 from portfire.report._folder import RunFolder
 from portfire.report._style import (
     COLOURS,
+    FAINT,
     INK,
     MARKERS,
     Absent,
     Drawn,
     interval_colours,
     make_figure,
-    shorten,
     write_svg,
 )
-from portfire.report._words import begin_sentence, count_words, write_number
+from portfire.report._words import count_words, write_number
 
-MAX_CONTEXTS, MAX_LEVELS, N_WORST, MAX_MARKS = 3, 4, 3, 25
+MAX_MARKS = 25
+CLOSE = 1.1  # squared differences over counting noise
 
 
 @dataclass(frozen=True)
@@ -41,7 +41,12 @@ class RateCheck:
         Mean squared difference over the counting noise that Poisson counts at the model's rate would give;
         1 is what a model that is right would show. None without `n_running`.
     by_unit : array (unit,)
-        The same for each unit (mean squared difference over the mean rate without `n_running`).
+        The same for each unit (mean squared difference over its mean rate without `n_running`).
+    by_time : array (time,)
+        The same for each run of `n_pooled` bins, NaN where too few trials run.
+    spread_by_unit, spread_by_time : array or None
+        Standard deviations of both that counting noise alone gives. None without `n_running`.
+    n_pooled : int
     worst : array of int
         Units by misfit, the largest first.
     """
@@ -49,202 +54,191 @@ class RateCheck:
     share: float
     excess: float | None
     by_unit: np.ndarray
+    by_time: np.ndarray
+    spread_by_unit: np.ndarray | None
+    spread_by_time: np.ndarray | None
+    n_pooled: int
     worst: np.ndarray
 
 
 def check_rates(rates: xr.Dataset) -> RateCheck | None:
     """Sum up the difference between recorded and model rates; None where no bin has enough trials."""
-    recorded, model = _arrays(rates)
+    recorded, model = stack_rates(rates)
     finite = np.isfinite(recorded) & np.isfinite(model)
     if not finite.any():
         return None
     time = rates["time"].values
+    running, bin_s = np.ones((*recorded.shape[:2], 1)), None
     if "n_running" in rates and len(time) > 1:
         running = rates["n_running"].transpose("condition", "time").values[:, :, None].astype(float)
         bin_s = float(np.median(np.diff(time)))
-    else:
-        running, bin_s = np.ones((*recorded.shape[:2], 1)), None
     weight = np.where(finite, running, 0.0)
     recorded, model = np.where(finite, recorded, 0.0), np.where(finite, model, 0.0)
     total = np.maximum(weight.sum((0, 1)), 1e-300)
     unit_mean = (weight * recorded).sum((0, 1)) / total
-    residual = (weight * (recorded - model) ** 2).sum((0, 1))
+    residual = (weight * (recorded - model) ** 2).sum()
     spread = (weight * (recorded - unit_mean) ** 2).sum()
-    share = float(1 - residual.sum() / spread) if spread > 0 else float("nan")
+    share = float(1 - residual / spread) if spread > 0 else float("nan")
     if bin_s is None:
-        by_unit, excess = residual / total / np.maximum(unit_mean, 1e-9), None
+        noise = np.broadcast_to(np.maximum(unit_mean, 1e-9), model.shape)
     else:
         noise = np.maximum(model, 1e-6) / (np.maximum(running, 1.0) * bin_s)
-        ratio = np.where(finite, (recorded - model) ** 2 / noise, 0.0)
-        by_unit = ratio.sum((0, 1)) / np.maximum(finite.sum((0, 1)), 1)
-        excess = float(ratio.sum() / finite.sum())
-    return RateCheck(share, excess, by_unit, np.argsort(-by_unit, kind="stable"))
+    ratio = np.where(finite, (recorded - model) ** 2 / noise, 0.0)
+    n_pooled = -(-len(time) // MAX_MARKS)
+    parts = ratio, _count_variance(model, running, bin_s, finite), finite
+    by_time, spread_by_time = _average(*(_pool(part.sum((0, 2)), n_pooled) for part in parts))
+    by_unit, spread_by_unit = _average(*(part.sum((0, 1)) for part in parts))
+    return RateCheck(
+        share=share,
+        excess=None if bin_s is None else float(ratio.sum() / finite.sum()),
+        by_unit=np.nan_to_num(by_unit),
+        by_time=by_time,
+        spread_by_unit=None if bin_s is None else spread_by_unit,
+        spread_by_time=None if bin_s is None else spread_by_time,
+        n_pooled=n_pooled,
+        worst=np.argsort(-np.nan_to_num(by_unit), kind="stable"),
+    )
 
 
-def state_rates(run: RunFolder) -> str:
-    """Return the summary of the check in words."""
+def _count_variance(
+    model: np.ndarray, running: np.ndarray, bin_s: float | None, finite: np.ndarray
+) -> np.ndarray:
+    """Return the variance of (k − μ)²/μ for Poisson counts k of mean μ, 2 + 1/μ, where there are counts."""
+    if bin_s is None:
+        return np.zeros(model.shape)
+    mean = np.maximum(model * running * bin_s, 1e-6)
+    return np.where(finite, 2 + 1 / mean, 0.0)
+
+
+def _pool(values: np.ndarray, n_pooled: int) -> np.ndarray:
+    return np.pad(values.astype(float), (0, -len(values) % n_pooled)).reshape(-1, n_pooled).sum(1)
+
+
+def _average(total: np.ndarray, variance: np.ndarray, n: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    seen = np.where(n > 0, n, 1)
+    return np.where(n > 0, total / seen, np.nan), np.where(n > 0, np.sqrt(variance) / seen, np.nan)
+
+
+def state_rates(run: RunFolder) -> list[str]:
+    """Return the summary of the check in words, as sentences."""
     check = check_rates(run.rates) if run.rates is not None else None
     if check is None:
-        return "Recorded and model rates were not compared: there are no rates to compare."
-    text = (
+        return ["Recorded and model rates were not compared: there are no rates to compare."]
+    share = (
         f"Over conditions and time the model's rates account for {write_number(100 * check.share, 1)} % of "
-        "the variance of the recorded ones about each unit's mean."
+        "the variance of the recorded ones about each unit's mean"
     )
-    if check.excess is not None:
-        text += (
-            f" Their mean squared difference is {write_number(check.excess)} times what counting noise "
-            "alone would give (1 for Poisson counts at the model's rates)."
-        )
+    if check.excess is None:
+        sentences = [f"{share}."]
+    else:
+        times = f"{write_number(check.excess)} times what Poisson counting noise alone would give"
+        if check.excess < CLOSE:
+            sentences = [
+                "The model's rates are as close to the recorded ones as counting allows: squared differences "
+                f"are {times}.",
+                f"{share}; the rest is counting noise of the recorded means.",
+            ]
+        else:
+            sentences = [
+                "The model's rates differ from the recorded ones by more than counting: squared differences "
+                f"are {times}. Rates that vary between trials, which the model has too, add to that noise.",
+                f"{share}.",
+            ]
     assert run.rates is not None
     if "pc_variance" in run.rates:
-        share = run.rates["pc_variance"].values
-        held = float(np.nansum(share[:10]))
-        n = min(10, len(share))
-        text += (
-            f" The first {count_words(n, 'principal component')} of the trial-averaged recorded rates "
+        shares = run.rates["pc_variance"].values
+        held = float(np.nansum(shares[:10]))
+        n = min(10, len(shares))
+        sentences.append(
+            f"The first {count_words(n, 'principal component')} of the trial-averaged recorded rates "
             f"{'holds' if n == 1 else 'hold'} {write_number(100 * held, 1)} % of their variance."
         )
-    return text
-
-
-def draw_rates_units(run: RunFolder) -> Drawn | Absent:
-    """Draw recorded and model rates by time for the units with the largest misfit."""
-    key, title = "rates-units", "Recorded and model rates of the worst-fitted units"
-    check = check_rates(run.rates) if run.rates is not None else None
-    if run.rates is None or check is None:
-        return Absent(key, title, _explain(run))
-    recorded, model = _arrays(run.rates)
-    time = run.rates["time"].values
-    groups = group_conditions(run.rates)
-    names = list(groups)[:MAX_CONTEXTS]
-    worst = check.worst[:N_WORST]
-    n_pooled = -(-len(time) // MAX_MARKS)
-    weight = np.ones(recorded.shape[:2])
-    if "n_running" in run.rates:
-        weight = run.rates["n_running"].transpose("condition", "time").values.astype(float)
-    longest = max(len(members) for members in groups.values())
-    figure = make_figure(0.7 + 2.15 * len(worst), 8.7 if len(names) > 1 else 6.0)
-    grid = figure.subplots(len(worst), len(names), squeeze=False, sharex=True, sharey="row")
-    levels: dict[str, Any] = {}
-    for column, name in enumerate(names):
-        for unit, axes in zip(worst, grid[:, column], strict=True):
-            for order, (condition, label) in enumerate(_thin(groups[name])):
-                look = _level_look(order, min(longest, MAX_LEVELS))
-                axes.plot(time, model[condition, :, unit], color=look[0], linewidth=2.2)
-                shown = average_bins(recorded[condition, :, unit], weight[condition], n_pooled)
-                middle = average_bins(time, np.ones(len(time)), n_pooled)
-                axes.plot(
-                    middle, shown, color=look[0], marker=look[1], markersize=4, linestyle="none", alpha=0.85
-                )
-                if label is not None:
-                    levels.setdefault(label, look)
-            axes.set_ylim(bottom=0)
-            axes.yaxis.set_major_locator(MaxNLocator(4))
-        if name is not None:
-            grid[0, column].set_title(f"context {shorten(name, 18)}")
-        grid[-1, column].set_xlabel("time from the set cue (s)")
-    units = run.rates["unit"].values if "unit" in run.rates.coords else np.arange(recorded.shape[2])
-    for unit, axes in zip(worst, grid[:, 0], strict=True):
-        axes.set_ylabel(f"unit {shorten(units[unit], 14)}\n(spikes/s)")
-    handles = [
-        Line2D([], [], color=colour, marker=marker, markersize=5, linewidth=2.2)
-        for colour, marker in levels.values()
-    ]
-    handles += [
-        Line2D([], [], color=INK, linewidth=2.2),
-        Line2D([], [], color=INK, marker="o", markersize=3.5, linestyle="none"),
-    ]
-    labels = [*levels, "model (line)", "recorded (marks)"]
-    figure.legend(handles, labels, loc="outside upper center", ncols=min(6, len(labels)))
-    alt = _describe_units(run.rates, check, units)
-    more = [
-        f"{len(names)} of {len(groups)} contexts" if len(groups) > len(names) else "",
-        f"{MAX_LEVELS} of {longest} sample intervals" if longest > MAX_LEVELS else "",
-    ]
-    pooled = f", each over {n_pooled} bins" if n_pooled > 1 else ""
-    left = "".join(f" Drawn: {part}." for part in more if part)
-    caption = (
-        f"The {count_words(len(worst), 'unit')} of {recorded.shape[2]} with the largest misfit: condition "
-        f"means of the recorded rate (marks{pooled}) and of the model (lines), where five or more trials "
-        f"still run.{left}"
-    )
-    return Drawn(key, title, write_svg(figure, key, title, alt), alt, caption)
+    return sentences
 
 
 def draw_rates_overall(run: RunFolder) -> Drawn | Absent:
-    """Draw recorded against model rate over all units, conditions and times, and the misfit of each unit."""
+    """Draw recorded against model rate over all entries, and the misfit by time and by unit."""
     key, title = "rates-overall", "Recorded against model rates, all units"
     check = check_rates(run.rates) if run.rates is not None else None
     if run.rates is None or check is None:
-        return Absent(key, title, _explain(run))
-    recorded, model = _arrays(run.rates)
-    finite = np.isfinite(recorded) & np.isfinite(model)
+        return Absent(key, title, explain_no_rates(run))
     figure = make_figure(3.9)
-    left, right = figure.subplots(1, 2)
+    left, middle, right = figure.subplots(1, 3, gridspec_kw={"width_ratios": (1.5, 1, 1)})
+    _draw_cells(figure, left, run.rates)
+    time = run.rates["time"].values
+    places = average_bins(time, np.ones(len(time)), check.n_pooled)
+    _draw_misfit(middle, places, check.by_time, check.spread_by_time)
+    middle.set(title="By time", xlabel="time from set cue (s)")
+    ordered = check.by_unit[check.worst]
+    spread = None if check.spread_by_unit is None else check.spread_by_unit[check.worst]
+    _draw_misfit(right, np.arange(1, len(ordered) + 1), ordered, spread)
+    right.set(title="By unit", xlabel="rank by misfit")
+    right.xaxis.set_major_locator(MaxNLocator(5, integer=True))
+    middle.set_ylabel(
+        "squared difference\n(times counting noise)"
+        if check.excess is not None
+        else "squared difference / mean rate\n(spikes/s)"
+    )
+    top = max(axes.get_ylim()[1] for axes in (middle, right))
+    for axes in (middle, right):
+        axes.set_ylim(0, top)
+    right.set_yticklabels([])
+    noise = (
+        ", over counting noise: a model that is right lies at 1 (dashed), and within the grey bars in 95 of "
+        "100 cases"
+        if check.excess is not None
+        else ""
+    )
+    caption = (
+        "Left: one entry for each unit, condition and bin with five or more trials; the line is equality. "
+        f"Middle and right: mean squared difference{noise}. Both rates are means over trials that still run, "
+        "in the model by its own response hazard, so late times compare survivors with survivors. The model "
+        "was fitted to these trials."
+    )
+    alt = " ".join(state_rates(run))
+    if check.excess is not None:
+        alt += (
+            f" By time the squared difference is {write_number(np.nanmin(check.by_time))} to "
+            f"{write_number(np.nanmax(check.by_time))} times counting noise, by unit "
+            f"{write_number(ordered[-1])} to {write_number(ordered[0])}."
+        )
+    return Drawn(key, title, write_svg(figure, key, title, alt), alt, caption)
+
+
+def _draw_cells(figure: Figure, axes: Axes, rates: xr.Dataset) -> None:
+    recorded, model = stack_rates(rates)
+    finite = np.isfinite(recorded) & np.isfinite(model)
     x, y = np.sqrt(model[finite]), np.sqrt(recorded[finite])
-    top = float(np.percentile(np.concatenate([x, y]), 99.8)) or 1.0
+    top = 1.03 * float(max(x.max(), y.max())) or 1.0
     pale_first = ListedColormap(interval_colours()(np.linspace(1, 0, 256)))
-    cells = left.hexbin(x, y, gridsize=34, extent=(0, top, 0, top), mincnt=1, cmap=pale_first, norm=LogNorm())
-    left.plot([0, top], [0, top], color=INK, linewidth=1)
+    cells = axes.hexbin(x, y, gridsize=34, extent=(0, top, 0, top), mincnt=1, cmap=pale_first, norm=LogNorm())
+    axes.plot([0, top], [0, top], color=INK, linewidth=1)
     ticks = _root_ticks(top)
-    for axis in (left.xaxis, left.yaxis):
+    for axis in (axes.xaxis, axes.yaxis):
         axis.set_ticks(np.sqrt(ticks), [f"{t:g}" for t in ticks])
-    left.set(xlabel="model rate (spikes/s, root scale)", ylabel="recorded rate (spikes/s, root scale)")
-    left.set_xlim(0, top)
-    left.set_ylim(0, top)
+    axes.set(xlabel="model rate (spikes/s, root scale)", ylabel="recorded rate (spikes/s, root scale)")
+    axes.set_xlim(-0.02 * top, top)
+    axes.set_ylim(-0.02 * top, top)
     bar = figure.colorbar(
         cells,
-        ax=left,
-        label="number of bins",
+        ax=axes,
+        label="number of entries",
         ticks=LogLocator(10, subs=(1, 2, 5)),
         format=FuncFormatter(_plain_tick),
     )
     bar.ax.yaxis.set_minor_formatter(NullFormatter())
-    ordered = check.by_unit[check.worst]
-    right.plot(
-        np.arange(1, len(ordered) + 1),
-        ordered,
-        color=COLOURS[0],
-        marker=MARKERS[0],
-        markersize=4,
-        linewidth=1,
-    )
-    right.set_xlabel("units, by misfit (rank)")
-    right.xaxis.set_major_locator(MaxNLocator(5, integer=True))
-    if check.excess is not None:
-        right.axhline(1, color=INK, linestyle=(0, (4, 3)), linewidth=1)
-        right.set_ylabel("squared difference\n(times counting noise)")
-    else:
-        right.set_ylabel("squared difference / mean rate\n(spikes/s)")
-    right.set_ylim(bottom=0)
-    alt = state_rates(run)
-    caption = (
-        "Left: one count for each unit, condition and bin with five or more trials; the line is equality. "
-        "Right: mean squared difference of each unit"
-        + (
-            ", over counting noise; the dashed line is 1, a model that is right."
-            if check.excess is not None
-            else "."
-        )
-    )
-    return Drawn(key, title, write_svg(figure, key, title, alt), alt, caption)
 
 
-def group_conditions(rates: xr.Dataset) -> dict[str | None, list[tuple[int, str | None]]]:
-    """Return, for each context (None where there are none), its conditions and their labels."""
-    n = rates.sizes["condition"]
-    contexts = rates["context"].values if "context" in rates.variables else [None] * n
-    samples = rates["sample_s"].values if "sample_s" in rates.variables else [np.nan] * n
-    groups: dict[str | None, list[tuple[int, str | None]]] = {}
-    for condition in range(n):
-        context, sample = contexts[condition], samples[condition]
-        name = None if pd.isna(context) or str(context) in ("", "None") else str(context)
-        label = None if pd.isna(sample) else f"{float(sample):g} s"
-        groups.setdefault(name, []).append((condition, label))
-    return groups
+def _draw_misfit(axes: Axes, x: np.ndarray, misfit: np.ndarray, spread: np.ndarray | None) -> None:
+    seen = np.isfinite(misfit)
+    if spread is not None:
+        low, high = np.maximum(1 - 1.96 * spread[seen], 0), 1 + 1.96 * spread[seen]
+        axes.vlines(x[seen], low, high, color=FAINT, linewidth=4.5 if len(misfit) < 60 else 2, zorder=0)
+        axes.axhline(1, color=INK, linestyle=(0, (4, 3)), linewidth=1)
+    axes.plot(x[seen], misfit[seen], color=COLOURS[0], marker=MARKERS[0], markersize=4, linewidth=1)
 
 
-def _arrays(rates: xr.Dataset) -> tuple[np.ndarray, np.ndarray]:
+def stack_rates(rates: xr.Dataset) -> tuple[np.ndarray, np.ndarray]:
     recorded, model = (
         rates[name].transpose("condition", "time", "unit").values.astype(float)
         for name in ("recorded", "model")
@@ -252,14 +246,24 @@ def _arrays(rates: xr.Dataset) -> tuple[np.ndarray, np.ndarray]:
     return recorded, model
 
 
-def _thin(members: list[tuple[int, str | None]]) -> list[tuple[int, str | None]]:
-    if len(members) <= MAX_LEVELS:
-        return members
-    return [members[k] for k in np.linspace(0, len(members) - 1, MAX_LEVELS).round().astype(int)]
+def _plain_tick(value: float, _: int | None = None) -> str:
+    return f"{value:,.0f}"
 
 
-def _level_look(order: int, n_levels: int) -> tuple[Any, str]:
-    return interval_colours()(order / max(1, n_levels - 1)), MARKERS[order % len(MARKERS)]
+def _root_ticks(top: float) -> np.ndarray:
+    """Return rates (spikes/s) whose roots are spread over 0 to `top`."""
+    known = np.array([0, 1, 2, 5, 10, 20, 40, 60, 100, 150, 200, 300, 400, 600, 800, 1000], dtype=float)
+    ticks = [0.0]
+    for tick in known[known**0.5 <= top]:
+        if tick**0.5 - ticks[-1] ** 0.5 >= 0.12 * top:
+            ticks.append(float(tick))
+    return np.array(ticks)
+
+
+def explain_no_rates(run: RunFolder) -> str:
+    if run.rates is None:
+        return "the run folder holds no rates.nc"
+    return "no condition has five trials that still run in any bin"
 
 
 def average_bins(values: np.ndarray, weight: np.ndarray, n_pooled: int) -> np.ndarray:
@@ -269,32 +273,3 @@ def average_bins(values: np.ndarray, weight: np.ndarray, n_pooled: int) -> np.nd
     weight = np.where(np.isfinite(values), np.pad(weight, padding).reshape(-1, n_pooled), 0.0)
     total = weight.sum(1)
     return np.where(total > 0, (weight * np.nan_to_num(values)).sum(1) / np.maximum(total, 1e-300), np.nan)
-
-
-def _plain_tick(value: float, _: int | None = None) -> str:
-    return f"{value:,.0f}"
-
-
-def _root_ticks(top: float) -> np.ndarray:
-    steps = [1, 2, 5, 10, 20, 50, 100, 200, 500]
-    step = next((s for s in steps if top**2 / s <= 6), 1000)
-    ticks = np.arange(0, top**2 + 1e-9, step)
-    return ticks[ticks**0.5 <= top]
-
-
-def _describe_units(rates: xr.Dataset, check: RateCheck, units: np.ndarray) -> str:
-    what = (
-        "times counting noise" if check.excess is not None else "spikes/s (squared difference over mean rate)"
-    )
-    parts = [f"unit {shorten(units[u])} {write_number(check.by_unit[u])}" for u in check.worst[:N_WORST]]
-    middle = write_number(np.median(check.by_unit))
-    return begin_sentence(
-        f"recorded and model rates by time and condition. Largest misfit, {what}: {'; '.join(parts)}; the "
-        f"median unit has {middle}."
-    )
-
-
-def _explain(run: RunFolder) -> str:
-    if run.rates is None:
-        return "the run folder holds no rates.nc"
-    return "no condition has five trials that still run in any bin"

@@ -8,11 +8,19 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from portfire.report._accounts import compare_scores, shorten_account, tabulate_contrasts
+from portfire.report._decode import distinct_rows
 from portfire.report._folder import RunFolder
 from portfire.report._pushes import relate_within
-from portfire.report._words import MINUS, write_interval, write_number, write_p_value, write_short
+from portfire.report._words import (
+    MINUS,
+    name_source,
+    write_interval,
+    write_number,
+    write_p_value,
+    write_short,
+)
 
-N_OPEN = 30
+N_OPEN = 20
 
 
 @dataclass(frozen=True)
@@ -40,14 +48,14 @@ def list_accounts(run: RunFolder) -> Table | None:
         elif paired.is_reference:
             difference = "0"
         else:
-            difference = f"{write_number(paired.difference)} ± {write_number(paired.se)}"
+            difference = f"{write_number(paired.difference, 3)} ± {write_number(paired.se, 3)}"
         rows.append(
             [
                 shorten_account(entry.get("account", "")),
                 str(entry.get("model")),
                 str(entry.get("latent_dim")),
                 write_number(entry.get("loglik_per_trial")),
-                write_number(entry.get("loglik_se"), 3),
+                write_short(entry.get("loglik_se"), 2),
                 difference,
                 write_number(entry.get("bits_per_spike"), 3),
                 str(entry.get("n_trials")),
@@ -90,21 +98,103 @@ def list_contrasts(run: RunFolder) -> Table | None:
     )
 
 
+def list_dims(run: RunFolder) -> Table | None:
+    """Return the verdict of each source by the number of latent dimensions."""
+    chosen = run.part("chosen").get("latent_dim")
+    rows = []
+    for contrast in run.rows("contrasts"):
+        verdicts = {int(d): str(v) for d, v in (contrast.get("at_dims") or {}).items()}
+        if chosen is None or not verdicts:
+            continue
+        ends = {int(d): value for d, value in (contrast.get("ends_nats") or {}).items()}
+        mode = contrast.get("carrying_mode")
+        # The mode is that of the fit with one dimension more, where there is one.
+        of_mode = chosen + 1 if chosen + 1 in verdicts else chosen
+        for dim in sorted({chosen, *verdicts}):
+            rows.append(
+                [
+                    name_source(contrast),
+                    f"{contrast.get('verdict')} (the verdict)" if dim == chosen else verdicts[dim],
+                    str(dim),
+                    "not given" if ends.get(dim) is None else write_number(ends[dim], 1),
+                    ("no decay" if mode is None else write_short(mode)) if dim == of_mode else "",
+                ]
+            )
+    if not rows:
+        return None
+    return Table(
+        "Verdicts by number of latent dimensions",
+        (
+            ("source", "what differs between trials"),
+            ("found", "as by the rule of the verdict, at this number of latent dimensions alone"),
+            ("D", "number of latent dimensions; one fewer and one more are fitted to all trials"),
+            (
+                "sustained less initial",
+                "log-likelihood of the account with the sustained push alone less that with the initial push "
+                "alone, on all trials, nats; above 0 the push lasts, below 0 it does not",
+            ),
+            (
+                "carrying mode",
+                "time constant, s, of the mode that holds the push at the end of a median trial where the "
+                "account has the initial push alone; where accounts tie and it outlasts the trial, the "
+                "verdict says so",
+            ),
+        ),
+        rows,
+        n_words=2,
+    )
+
+
+def list_sizes(run: RunFolder) -> Table | None:
+    """Return the sizes that were weighed, with their held-out deficits."""
+    candidates = [c for c in run.part("chosen").get("candidates") or [] if isinstance(c, Mapping)]
+    if not candidates:
+        return None
+    keys = ("model", "latent_dim", "drift")
+    chosen = [run.part("chosen").get(key) for key in keys]
+    rows = [
+        [
+            str(c.get("model")),
+            "chosen" if [c.get(key) for key in keys] == chosen else "",
+            write_plain(c.get("drift")),
+            str(c.get("latent_dim")),
+            write_number(c.get("deficit_nats_per_trial"), 3),
+            write_number(c.get("deficit_se"), 3),
+        ]
+        for c in candidates
+    ]
+    return Table(
+        "Size of the model",
+        (
+            ("model", "the model file"),
+            ("choice", "the smallest size whose deficit is under its standard error and under min_gain"),
+            ("drift", "whether each unit's rate may drift slowly over the session"),
+            ("D", "number of latent dimensions"),
+            ("deficit", "to the best size, paired over held-out trials, nats a trial"),
+            ("SE", "standard error of the deficit, nats a trial"),
+        ),
+        rows,
+        n_words=3,
+        folded=len(rows) > N_OPEN,
+    )
+
+
 def list_decode(run: RunFolder) -> Table | None:
-    """Return the decode rows."""
+    """Return the decode rows; those of the late variant only where it leaves trials out."""
     rows = [
         [
             str(r.get("features")),
             str(r.get("variant", "all")),
             write_short(r.get("cutoff_s")),
-            *(write_plain(r.get(key)) for key in ("running", "n_used", "n_trials")),
+            f"{write_plain(r.get('n_trials'))} of {write_plain(r.get('running'))}",
             write_number(r.get("r2_within_condition"), 3),
             write_interval(r.get("ci95"), 3),
+            write_number(r.get("r2_window"), 3),
             write_interval(r.get("null95"), 3),
             write_p_value(r.get("p")),
             "not given" if r.get("null_draws") is None else str(r["null_draws"]),
         ]
-        for r in run.rows("decode")
+        for r in distinct_rows(run)
     ]
     if not rows:
         return None
@@ -114,19 +204,18 @@ def list_decode(run: RunFolder) -> Table | None:
             ("features", "a push, both, the state at the cutoff, or one raw count a unit (the yardstick)"),
             ("trials", "all: still running at the cutoff; late: respond 0.15 s or more after it"),
             ("cutoff", "spikes up to this time after the set cue are used, s"),
-            ("running", "trials with a response that still run at the cutoff"),
-            ("left", "of these, the late ones where the row is late"),
-            ("scored", "of these, trials of a condition that training can standardise"),
-            ("R²", "of the standardised log interval within conditions, on held-out trials"),
+            ("scored", "trials scored, of those with a response that still run at the cutoff"),
+            ("R²", "of the standardised log interval within conditions, over all held-out trials"),
             ("95 % interval", "of R², bootstrap over blocks of trials"),
-            ("null, 95 %", "middle 95 % of R² under linear shifts of the responses against the recording"),
+            ("R² tested", "the same over the middle 60 % of the trials: what p sets against the null"),
+            ("null, 95 %", "middle 95 % of that R² under linear shifts of the responses"),
             ("p", "one-sided, (1 + draws at least as large) / (1 + draws); not adjusted over rows"),
             ("draws", "number of distinct shifts"),
         ),
         rows,
         n_words=2,
         folded=len(rows) > N_OPEN,
-    )  # fmt: skip
+    )
 
 
 _BEHAVIOUR = (
@@ -177,7 +266,7 @@ def list_relations(run: RunFolder) -> Table | None:
         "Correlation of each push with the produced interval, within conditions",
         (
             ("push", "initial or sustained"),
-            *((f"latent {k}", "correlation over single trials" if k == latents[0] else "") for k in latents),
+            *((f"latent {k}", "correlation r over single trials" if k == 1 else "") for k in latents),
             ("trials", "number of trials with a response"),
         ),
         rows,
@@ -205,8 +294,7 @@ def list_left_out(run: RunFolder) -> Table | None:
 def list_settings(run: RunFolder) -> Table:
     """Return settings, versions and seed."""
     rows = [["seed", write_plain(run.result.get("seed"))]]
-    rows += flatten("", run.part("settings"))
-    rows += flatten("chosen", run.part("chosen"))
+    rows += [row for row in flatten("", run.part("settings")) if row[0] != "seed"]
     rows.append(["version of portfire", write_plain(run.result.get("portfire"))])
     rows += [
         [f"version of {name}", write_plain(v)]
@@ -214,9 +302,6 @@ def list_settings(run: RunFolder) -> Table:
         if name != "portfire"
     ]
     rows.append(["digest of the session", write_plain(run.part("session").get("digest"))])
-    for key in ("carrying_mode",):
-        if key in run.result:
-            rows += flatten(key, run.result[key])
     columns = (("setting", "as in the job file, section and key"), ("value", "a number, a word or a list"))
     return Table("As the run resolved them", columns, rows, n_words=2)
 
@@ -236,6 +321,8 @@ def write_plain(value: Any) -> str:
     """Return a setting as text."""
     if value is None:
         return "not given"
+    if value in ({}, []):
+        return "none"
     if isinstance(value, bool):
         return "yes" if value else "no"
     if isinstance(value, int | float):

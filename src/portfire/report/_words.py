@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable, Mapping
 from typing import Any
 
@@ -14,11 +15,6 @@ SUBJECTS = {
     "interval": "the sample interval",
     "context": "the context",
     "trial": "what differs between trials of one condition",
-}
-ENTRIES = {
-    "total": "total: both routes taken away",
-    "initial_unique": "initial, unique",
-    "sustained_unique": "sustained, unique",
 }
 
 
@@ -44,6 +40,12 @@ def write_interval(bounds: Any, digits: int = 2) -> str:
     if not bounds or any(b is None for b in bounds):
         return "not given"
     return f"{write_number(bounds[0], digits)} to {write_number(bounds[1], digits)}"
+
+
+def pick_digits(*values: Any) -> int:
+    """Return how many decimals tell small gains apart: 3 where all are below 0.1, else 2."""
+    known = [abs(float(v)) for v in values if v is not None]
+    return 3 if known and max(known) < 0.1 else 2
 
 
 def write_p(p: Any) -> str:
@@ -87,6 +89,12 @@ def open_routes(contrast: Mapping[str, Any]) -> list[str]:
     return [routes] if isinstance(routes, str) else [str(r) for r in routes]
 
 
+def name_source(contrast: Mapping[str, Any]) -> str:
+    """Return the source of a contrast, after its session where the result holds several."""
+    source = str(contrast.get("source"))
+    return f"{contrast['session']}: {source}" if contrast.get("session") else source
+
+
 def state_verdict(contrast: Mapping[str, Any], min_gain: float) -> str:
     """Return one sentence: what pushes the state, and how."""
     source = str(contrast.get("source"))
@@ -123,6 +131,16 @@ def state_open(contrast: Mapping[str, Any], n_used: int | None) -> str | None:
     return f"{sentence}; roughly {round_trials(int(n_trials))} trials would close this{have}."
 
 
+def state_reason(contrast: Mapping[str, Any]) -> str | None:
+    """Return why a verdict is undetermined, in the words of the result; None for other verdicts."""
+    words = contrast.get("words")
+    if contrast.get("verdict") != "undetermined" or not words:
+        return None
+    # The headline says that these data cannot tell, and the sentence on open routes says what would.
+    words = re.sub(r"^Between [^,:]+, these data cannot tell: ", "", str(words))
+    return begin_sentence(re.sub(r"; about \d+ trials would settle it[^.;]*", "", words))
+
+
 def round_trials(n: int) -> str:
     """Return a number of trials with two significant figures: it is an extrapolation."""
     if n < 100:
@@ -131,34 +149,79 @@ def round_trials(n: int) -> str:
     return f"{math.ceil(n / step) * step:,}"
 
 
-def state_evidence(contrast: Mapping[str, Any]) -> str:
-    """Return the numbers behind a verdict as a sentence: that of the result, or else one made here."""
-    if contrast.get("words"):
-        return str(contrast["words"])
-    parts = []
+def state_evidence(contrast: Mapping[str, Any], min_gain: float) -> str | None:
+    """Return the numbers behind a verdict as a sentence or two, the needed route first."""
     lead = {
         "initial_unique": "without the initial route",
         "sustained_unique": "without the sustained route",
         "total": "without either",
     }
-    for key, words in lead.items():
+    verdict = contrast.get("verdict")
+    order = sorted(lead, key=lambda key: key != f"{verdict}_unique")
+    parts = []
+    for key in order:
         entry = contrast.get(key)
-        if isinstance(entry, Mapping):
-            value = write_number(entry.get("nats_per_trial"))
-            interval = write_interval(entry.get("ci95"))
-            parts.append(f"{value} nats {words} (95{GAP}% CI {interval}; {write_p(entry.get('p'))})")
-    return f"Held out, a trial loses {join_words(parts)}." if parts else ""
+        if isinstance(entry, Mapping) and entry.get("nats_per_trial") is not None:
+            digits = pick_digits(entry["nats_per_trial"], *(entry.get("ci95") or []))
+            value = write_number(entry["nats_per_trial"], digits)
+            interval = write_interval(entry.get("ci95"), digits)
+            parts.append(f"{value} nats {lead[key]} (95{GAP}% CI {interval}; {write_p(entry.get('p'))})")
+    if not parts:
+        return str(contrast["words"]) if contrast.get("words") and verdict != "undetermined" else None
+    text = f"Held out, a trial loses {join_words(parts)}."
+    other = {"initial": "sustained", "sustained": "initial"}.get(str(verdict))
+    bounds = (contrast.get(f"{other}_unique") or {}).get("ci95") if other else None
+    if bounds and bounds[1] is not None and bounds[1] < min_gain:
+        most = write_number(max(bounds[1], 0.0), 3)
+        text += (
+            f" The {other} route is not needed beside it: it adds at most {most} nats a trial, less than "
+            f"{write_short(min_gain)}."
+        )
+    return text
 
 
-def state_dims(contrast: Mapping[str, Any]) -> str | None:
-    """Return what the verdict is with one latent dimension fewer and more; None where not given."""
+def state_dims(contrast: Mapping[str, Any], latent_dim: int | None) -> str | None:
+    """Return what the verdict is with one latent dimension fewer and more, and why it stands all the same."""
     at_dims = contrast.get("at_dims")
-    if not isinstance(at_dims, Mapping) or not at_dims:
+    if not isinstance(at_dims, Mapping):
         return None
-    parts = [f"{dim}: {verdict}" for dim, verdict in sorted(at_dims.items(), key=lambda kv: int(kv[0]))]
-    agree = all(verdict == contrast.get("verdict") for verdict in at_dims.values())
-    return f"With other numbers of latent dimensions ({'; '.join(parts)}) the verdict " + (
-        "is the same." if agree else "is not the same throughout."
+    verdict = contrast.get("verdict")
+    others = sorted(at_dims.items(), key=lambda kv: int(kv[0]))
+    alike = join_words([f"with {dim}" for dim, found in others if found == verdict])
+    found_at = [(alike, "the same")] if alike else []
+    found_at += [(f"with {dim}", str(found)) for dim, found in others if found != verdict]
+    unlike = len(found_at) > bool(alike)
+    parts = [
+        f"{where} {'latent dimensions the verdict' if k == 0 else 'it'} is {found}"
+        for k, (where, found) in enumerate(found_at)
+    ]
+    text = f"{begin_sentence(', '.join(parts))}." if parts else ""
+    if latent_dim is None:
+        return text or None
+    above = str(latent_dim + 1)
+    if above not in at_dims:
+        return f"{text} It was not checked with {above} latent dimensions.".strip()
+    if at_dims[above] != verdict and verdict != "undetermined":
+        text += f" {_explain_standing(contrast, latent_dim)}"
+    elif unlike and verdict != "undetermined":
+        text += f" It stands, because it holds with {above}; fewer are reported and do not overrule."
+    return text.strip()
+
+
+def _explain_standing(contrast: Mapping[str, Any], latent_dim: int) -> str:
+    ends = contrast.get("ends_nats") or {}
+    here, above = (ends.get(str(d)) for d in (latent_dim, latent_dim + 1))
+    ahead, behind = ("initial", "sustained")
+    if contrast.get("verdict") == "sustained":
+        ahead, behind = behind, ahead
+    sign = 1 if ahead == "sustained" else -1
+    named = contrast.get("verdict") == ahead
+    if not named or here is None or above is None or min(sign * here, sign * above) <= 0:
+        return "The result does not say why it stands."
+    return (
+        f"It stands, because at {latent_dim} and at {latent_dim + 1} the account with the {ahead} push alone "
+        f"is ahead of the one with the {behind} push alone, by {abs(here):.0f} and {abs(above):.0f} nats on "
+        "all trials."
     )
 
 
@@ -182,50 +245,33 @@ def explain_untested(run: RunFolder) -> list[str]:
     return sentences
 
 
-def state_decode(run: RunFolder, features: str = "state") -> str:
-    """Return whether the single-trial state predicts the produced interval, as a sentence or two."""
-    rows = [r for r in run.rows("decode") if r.get("variant", "all") == "all"]
-    chosen = [r for r in rows if r.get("features") == features]
-    if not chosen:
-        return f"No prediction of the produced interval: {explain_no_decode(run)}."
-    passed = [r for r in chosen if r.get("p") is not None and r["p"] <= run.level]
-    best = max(chosen, key=lambda r: _or_low(r.get("r2_within_condition")))
-    numbers = describe_row(best)
-    cutoffs = join_words([f"{write_short(r['cutoff_s'])}{GAP}s" for r in passed])
-    if not passed:
-        return (
-            "The single-trial state does not predict the produced interval within a condition better than "
-            f"its null at any cutoff (p above {write_short(run.level)}); the largest is {numbers}. A p "
-            "above the level is no evidence of absence."
-        )
-    counts = [r for r in rows if r.get("features") == "counts" and r.get("cutoff_s") == best.get("cutoff_s")]
-    yardstick = ""
-    if counts:
-        value = write_number(counts[0].get("r2_within_condition"))
-        yardstick = f" The yardstick, one raw count a unit over the same window, reaches {value}."
-    return (
-        "The single-trial state predicts the produced interval within a condition, with spikes up to "
-        f"{cutoffs} after the set cue: {numbers}.{yardstick}"
-    )
+def state_time(run: RunFolder) -> str | None:
+    """Return how well trial time explains the context; None where the result does not say."""
+    for contrast in run.rows("contrasts"):
+        if contrast.get("time_r2") is not None:
+            share = write_number(100 * contrast["time_r2"], 0)
+            return (
+                f"Trial time explains {share}{GAP}% of the context; above 50{GAP}% the context counts as "
+                "confounded with drift."
+            )
+    return None
 
 
-def describe_row(row: Mapping[str, Any]) -> str:
-    """Return the numbers of a decode row."""
-    return (
-        f"R² {write_number(row.get('r2_within_condition'))} at {write_short(row.get('cutoff_s'))} s "
-        f"(95{GAP}% CI {write_interval(row.get('ci95'))}; null {write_interval(row.get('null95'))}; "
-        f"{write_p(row.get('p'))})"
-    )
-
-
-def explain_no_decode(run: RunFolder) -> str:
-    """Return why the result has no decode rows."""
-    if run.trials is not None and not run.has_responses:
-        return "no used trial has a response"
-    if run.setting("decode", "cutoffs_s", None) == []:
-        return "the job lists no cutoffs"
-    return "the result holds no rows for it"
-
-
-def _or_low(value: Any) -> float:
-    return -math.inf if value is None else float(value)
+def state_by_fold(run: RunFolder) -> str | None:
+    """Return what was chosen inside each training set; None where the result does not say."""
+    by_fold = [size for size in run.part("chosen").get("by_fold") or [] if isinstance(size, Mapping)]
+    if not by_fold:
+        return None
+    keys = ("model", "latent_dim", "drift")
+    chosen = [tuple(size.get(key) for key in keys) for size in by_fold]
+    whole = tuple(run.part("chosen").get(key) for key in keys)
+    if set(chosen) == {whole}:
+        return f"Inside each of the {len(chosen)} training sets the choice is the same."
+    same = [str(fold) for fold, size in enumerate(chosen, start=1) if size == whole]
+    parts = [f"without fold {join_words(same, 'or')} it is the same"] if same else []
+    parts += [
+        f"without fold {fold} it is {model} with {dim} latent dimensions{'' if drift else ', no drift'}"
+        for fold, (model, dim, drift) in enumerate(chosen, start=1)
+        if (model, dim, drift) != whole
+    ]
+    return f"The choice inside the training sets: {'; '.join(parts)}."
