@@ -110,6 +110,7 @@ def test_a_trailing_slash_does_not_change_the_name(folder, monkeypatch):
 WRONG = [
     ('sesion = "session"', "names no session"),
     ('sessions = "session"', "instead of 'sessions'"),
+    ('sesion = "session"', "instead of 'sesion'"),
     ('session = "nowhere"', r"session .*nowhere: does not exist"),
     ('session = "job.toml"', r"job\.toml: is neither a session folder"),
     ('session = ["session", "session"]', r"list of different paths, but is \['session', 'session'\]"),

@@ -119,6 +119,7 @@ class _Context(SpawnContext):
     def __init__(self) -> None:
         self.started: list[_Worker] = []
 
+    # The stubs have a class in this place, which a method cannot be.
     def Process(self, *args: Any, **kwargs: Any) -> _Worker:  # type: ignore[override]
         process = _Worker(*args, **kwargs)
         self.started.append(process)

@@ -229,7 +229,7 @@ def _from_file(path: Path) -> Job:
     except OSError as error:
         raise InputError(f"{path}: cannot be read ({error.strerror})") from None
     if "session" not in raw:
-        wrong = [key for key in raw if key in ("sessions", "Session", "path")]
+        wrong = [key for key in raw if key == "path" or nearest(key, ("session",))]
         hint = f" instead of {wrong[0]!r}" if wrong else ""
         raise InputError(f'{path}: names no session; add a line such as session = "session/"{hint}')
     return _resolve(raw, path.parent, str(path), source=path)
