@@ -64,7 +64,7 @@ def test_a_bare_session_gets_the_defaults_of_the_interface(folder, monkeypatch):
         "compare": {
             "sources": ["interval", "context", "trial"],
             "folds": 5,
-            "latent_dims": [2, 3, 4, 5],
+            "latent_dims": None,
             "min_gain": 0.05,
         },
         "decode": {"cutoffs_s": [0.1, 0.2, 0.3], "draws": 1000},
@@ -212,9 +212,15 @@ def test_paths_that_are_no_job_are_named(folder):
 
 
 def test_a_job_is_checked_against_the_size_of_its_session(folder):
-    job = read_job(write(folder, 'session = "session"'))
+    job = read_job(write(folder, 'session = "session"\n[compare]\nlatent_dims = [2, 5]'))
     check_job(job, n_units=5, n_trials=20)
     with pytest.raises(InputError, match=r"latent_dims goes up to 5, but the session has 4 usable units"):
         check_job(job, n_units=4, n_trials=20)
     with pytest.raises(InputError, match=r"folds is 5, which needs 20 trials, but the session has 19"):
         check_job(job, n_units=5, n_trials=19)
+
+
+@pytest.mark.parametrize(("n_units", "dims"), [(1, (1,)), (3, (1, 2, 3)), (4, (2, 3, 4)), (60, (2, 3, 4, 5))])
+def test_the_default_sizes_suit_the_units(folder, n_units, dims):
+    job = read_job(write(folder, 'session = "session"'))
+    assert check_job(job, n_units, 20).compare.latent_dims == dims
