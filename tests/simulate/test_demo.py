@@ -6,6 +6,7 @@ import numpy as np
 from scipy.ndimage import gaussian_filter1d
 
 from portfire.session import inspect_session
+from portfire.simulate import demo_scenario
 
 
 def condition_means(trials, produced):
@@ -43,8 +44,8 @@ def test_context_and_interval_are_not_confounded_with_time(demo):
 def test_silent_units_and_lapses_are_left_out(demo):
     session, drawn = demo
     trials = session.bin()
-    assert len(trials.unit) == 50
-    assert len(trials.units_left_out) == 3
+    assert len(trials.unit) == demo_scenario().n_units
+    assert len(trials.units_left_out) == demo_scenario().n_silent == 3
     assert all("below 0.5" in reason for reason in trials.units_left_out.values())
     kinds = dict(zip(drawn.trials["trial"], drawn.kind, strict=True))
     left_out = {kinds[label] for label in trials.trials_left_out}

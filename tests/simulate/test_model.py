@@ -8,7 +8,7 @@ import pytest
 
 from portfire.accounts import Account, make_design
 from portfire.dynamics import ModelFile, initial_covariance, make_setup, parameter_shapes, path_inputs
-from portfire.simulate import Scenario, draw_session, true_parameters
+from portfire.simulate import Scenario, demo_scenario, draw_session, true_parameters
 from portfire.simulate._make import make_system
 from portfire.simulate._system import carry
 from portfire.simulate._system import path_inputs as drawn_inputs
@@ -92,7 +92,7 @@ def test_mean_rates_are_those_asked_for(demo):
     trials = demo[0].bin()
     rates = trials.counts.sum(axis=(0, 1)) / trials.duration_s.sum()
     assert 9 < rates.mean() < 15
-    assert drawn.system.setup.n_units == 53
+    assert drawn.system.setup.n_units == demo_scenario().n_units + demo_scenario().n_silent
 
 
 @pytest.mark.parametrize("latent_dim", [1, 2, 4, 6])
