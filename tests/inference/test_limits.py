@@ -10,6 +10,7 @@ from portfire.dynamics import ModelFile, Setup, make_setup, parameter_shapes
 from portfire.estimation._freedom import Freedom
 from portfire.estimation._objective import Objective
 from portfire.estimation._optimise import ascend
+from portfire.estimation._scaling import make_scaling
 from portfire.inference import Packed, laplace, laplace_gradient, pack, posterior_moments, start_path
 from portfire.session import Session, Trials
 
@@ -36,9 +37,12 @@ def test_a_poisson_regression_is_the_limit_without_a_latent_state() -> None:
     setup = Setup(model, 1, 1, 1.0, 0, 2, (), ("trial",), 4)
     start = {name: np.zeros(shape) for name, shape in parameter_shapes(setup).items()}
     start.update(noise=np.array(1.0), transition=np.array([[0.5]]), log_rate=np.log([DOBSON.mean()]))
-    objective = Objective(Packed((chunk,), (np.arange(9),), 9, 2), setup)
+    packed = Packed((chunk,), (np.arange(9),), 9, 2)
+    objective = Objective(packed, setup)
     none = np.array([], dtype=int)
-    found = ascend(objective, start, setup, Freedom(none, none, False, False, True), 1e-12, 200)
+    objective(start)
+    scaling = make_scaling(start, setup, Freedom(none, none, False, False, True), packed, objective.last, 1.0)
+    found = ascend(objective, scaling, 1e-12, 200)
     objective.close()
     assert not np.any(found.params["readout"])
     saturated = float(np.sum(DOBSON * np.log(DOBSON) - DOBSON)) - log_factorials(DOBSON)
