@@ -60,7 +60,9 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit, agreement: float
     fits: dict[str, Fit] = {str(accounts[0]): full}
     for account in sorted(accounts[1:], key=lambda account: -account.n_pushes()):
         # The lowest container is the nearest to what is left: it has already lost what matters.
-        containers = [fits[str(other)] for other in accounts if str(other) in fits and other.contains(account)]
+        containers = [
+            fits[str(other)] for other in accounts if str(other) in fits and other.contains(account)
+        ]
         fits[str(account)] = refit(account, min(containers, key=lambda fitted: fitted.value))
     for n_round in range(_MAX_ROUNDS):
         raised = _raise_containers(fits, accounts, refit, agreement)

@@ -62,9 +62,7 @@ class _Memory:
         return q
 
 
-def ascend(
-    objective: Objective, scaling: Scaling, tolerance: float, max_iterations: int
-) -> Ascent:
+def ascend(objective: Objective, scaling: Scaling, tolerance: float, max_iterations: int) -> Ascent:
     """Maximise the objective from the centre of the scaling.
 
     Stops when the last four iterations together gained less than ``tolerance`` nats.

@@ -99,7 +99,9 @@ class Scaling:
         out["push"][:, free.lasting] += rows[:, d + 1 + n_cue :]
         if len(free.prompt):
             left = solve_triangular(self.prompt_left, parts["prompt"], lower=True, trans="T")
-            out["push"][:, free.prompt] += solve_triangular(self.prompt_right, left.T, lower=True, trans="T").T
+            out["push"][:, free.prompt] += solve_triangular(
+                self.prompt_right, left.T, lower=True, trans="T"
+            ).T
         if free.initial_factor:
             out["initial_factor"] += self.initial @ parts["initial"]
         if free.sustained_factor:
@@ -110,7 +112,12 @@ class Scaling:
 
     def _rows(self, values: dict[str, np.ndarray]) -> np.ndarray:
         return np.concatenate(
-            [values["transition"], values["offset"][:, None], values["cue"], values["push"][:, self.freedom.lasting]],
+            [
+                values["transition"],
+                values["offset"][:, None],
+                values["cue"],
+                values["push"][:, self.freedom.lasting],
+            ],
             axis=1,
         )
 
@@ -159,7 +166,7 @@ def make_scaling(
     for chunk, (mode, moments) in zip(packed.chunks, posteriors, strict=False):
         x, cov = np.asarray(mode.x), np.asarray(moments.covariance)
         mask, drift, rows = np.asarray(chunk.mask), np.asarray(chunk.drift), np.asarray(chunk.rows)
-        n_time, _, n_lanes = x.shape
+        n_time = len(x)
         at = np.nonzero(mask)
         spread = np.moveaxis(cov, -1, 1)[at]
         features = np.concatenate(
@@ -180,7 +187,12 @@ def make_scaling(
         step, lane = np.nonzero(mask[before + 1 :] * mask[before:-1])
         pushes = rows[lasting][:, lane] * kernels[lasting][:, step + 1]
         z = np.concatenate(
-            [np.moveaxis(x, -1, 1)[before + step, lane], np.ones((len(step), 1)), cue[:, step + 1].T, pushes.T],
+            [
+                np.moveaxis(x, -1, 1)[before + step, lane],
+                np.ones((len(step), 1)),
+                cue[:, step + 1].T,
+                pushes.T,
+            ],
             axis=1,
         )
         steps += z.T @ z
