@@ -1,6 +1,12 @@
 """Folds, gains, p values and verdicts: what the held-out scores say about the accounts."""
 
-from ._boundary import cone_weights, count_parameters, likelihood_ratio_p, mixture_weights
+from ._boundary import (
+    cone_weights,
+    count_parameters,
+    expected_cost,
+    likelihood_ratio_p,
+    mixture_weights,
+)
 from ._carry import carrying_time_constant
 from ._contrast import Contrast, Entry, Scored, contrast_sources
 from ._folds import block_of, block_size, fold_of, training_rows
@@ -44,6 +50,7 @@ __all__ = [
     "mixture_weights",
     "likelihood_ratio_p",
     "count_parameters",
+    "expected_cost",
     "Evidence",
     "Verdict",
     "judge",

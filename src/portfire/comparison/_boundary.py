@@ -172,6 +172,28 @@ def likelihood_ratio_p(stat: float, n_fixed: int, cov_dims: Sequence[int] = ()) 
     return min(1.0, float(weights[1:] @ stats.chi2.sf(stat, degrees)))
 
 
+def expected_cost(n_fixed: int, cov_dims: Sequence[int] = ()) -> float:
+    """Parameters that a contrast costs on new trials where it has nothing to find: the mean of the mixture.
+
+    A covariance at its boundary is estimated as zero in about half of its directions, and costs nothing
+    there: D(D + 1)/4 instead of D(D + 1)/2.
+
+    Parameters
+    ----------
+    n_fixed : int
+        Fixed effects that the smaller account lacks.
+    cov_dims : sequence of int, default ()
+        Rows of each covariance that is zero in the smaller account.
+
+    Returns
+    -------
+    float
+        ``sum_j j v_j``.
+    """
+    weights = mixture_weights(n_fixed, cov_dims)
+    return float(weights @ np.arange(weights.size))
+
+
 def count_parameters(n_fixed: int, cov_dims: Sequence[int] = ()) -> int:
     """Free parameters of a contrast: fixed effects and the distinct entries of each covariance."""
     return n_fixed + sum(comb(dim + 1, 2) for dim in cov_dims)

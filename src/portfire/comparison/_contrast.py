@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from ..accounts import ROUTES, Account
 from ..dynamics import Setup
 from ..estimation import count_route
-from ._boundary import likelihood_ratio_p
+from ._boundary import expected_cost, likelihood_ratio_p
 from ._gain import gain, holm
 from ._verdict import Evidence, Verdict, judge
 
@@ -51,7 +51,11 @@ class Scored:
 
 @dataclass(frozen=True)
 class Entry:
-    """One entry of a contrast: evidence with adjusted p, and the likelihood ratio behind it."""
+    """One entry of a contrast: evidence with adjusted p, and the likelihood ratio behind it.
+
+    ``n_params`` are the parameters that the smaller account lacks; the gain was corrected for ``cost`` of
+    them, which is less where some are covariances at their boundary.
+    """
 
     evidence: Evidence
     statistic: float
@@ -59,6 +63,7 @@ class Entry:
     cov_dims: tuple[int, ...]
     p_raw: float
     n_params: int
+    cost: float
 
 
 @dataclass(frozen=True)
@@ -140,10 +145,11 @@ def contrast_sources(
     entries: dict[tuple[str, str], Entry] = {}
     for key, (smaller, statistic, fixed, dims, total, p_raw), p in zip(keys, raw, adjusted, strict=True):
         difference = scored.loglik[str(full)] - scored.loglik[str(smaller)]
+        cost = expected_cost(fixed, dims)
         if scored.in_sample:
-            difference = difference - total / scored.n_train
-        gained = gain(difference, total, scored.n_train, scored.n_folds)
-        entries[key] = Entry(Evidence(gained, float(p)), statistic, fixed, dims, float(p_raw), total)
+            difference = difference - cost / scored.n_train
+        gained = gain(difference, cost, scored.n_train, scored.n_folds)
+        entries[key] = Entry(Evidence(gained, float(p)), statistic, fixed, dims, float(p_raw), total, cost)
     return tuple(_contrast_one(scored, full, source, entries, level, min_gain) for source in sources)
 
 

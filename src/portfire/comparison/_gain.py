@@ -101,7 +101,7 @@ def _check_finite(values: NDArray[np.float64], labels: Sequence[str] | None = No
         raise PortfireError(f"the score difference of {name} is {values[i]}; it must be a finite number")
 
 
-def gain(diff_per_trial: ArrayLike, n_params: int, n_train: float, n_folds: int) -> Gain:
+def gain(diff_per_trial: ArrayLike, n_params: float, n_train: float, n_folds: int) -> Gain:
     """Mean held-out gain of an account over one that it contains.
 
     A useless parameter costs about ``1 / (2 n_train)`` nats on each held-out trial, so the raw difference
@@ -116,8 +116,9 @@ def gain(diff_per_trial: ArrayLike, n_params: int, n_train: float, n_folds: int)
     ----------
     diff_per_trial : (trial,) float
         Held-out score of the larger account minus the smaller, nats, of every scored trial once.
-    n_params : int
-        Free parameters k of the larger account that the smaller lacks.
+    n_params : float
+        Free parameters k of the larger account that the smaller lacks; a covariance at its boundary counts
+        for less than its entries (`expected_cost`).
     n_train : float
         Mean number of training trials of a fold.
     n_folds : int

@@ -67,7 +67,7 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit, agreement: float
     for n_round in range(_MAX_ROUNDS):
         raised = _raise_containers(fits, accounts, refit, agreement)
         if not raised:
-            return Ladder(fits, n_round, True)
+            return Ladder(fits, n_round, not _behind(fits, accounts, agreement))
         for account in accounts:
             for larger in raised:
                 if larger != account and larger.contains(account):
@@ -96,7 +96,8 @@ def _raise_containers(
 ) -> list[Account]:
     raised = []
     # From the smallest container up, so that a rise is handed on within one round.
-    for larger in sorted({pair[0] for pair in _behind(fits, accounts, agreement)}, key=str):
+    low = {larger for larger, _ in _behind(fits, accounts, agreement)}
+    for larger in sorted(low, key=lambda account: (account.n_pushes(), str(account))):
         behind = _behind(fits, accounts, agreement)
         candidates = [fits[str(smaller)] for container, smaller in behind if container == larger]
         if not candidates:

@@ -173,7 +173,7 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
             }
             for name, entry in here.entries.items()
         },
-        "gain_k": {name: entry.n_params for name, entry in here.entries.items()},
+        "gain_k": {name: entry.cost for name, entry in here.entries.items()},
         "at_dims": {str(d): v.label for d, v in sorted(at_dims.items())},
         "ends_nats": {
             str(best.latent_dim + shift): found.end_difference for shift, found in sorted(by_shift.items())
