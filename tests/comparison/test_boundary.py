@@ -4,7 +4,13 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from portfire.comparison import cone_weights, count_parameters, likelihood_ratio_p, mixture_weights
+from portfire.comparison import (
+    cone_weights,
+    count_parameters,
+    expected_cost,
+    likelihood_ratio_p,
+    mixture_weights,
+)
 from portfire.errors import PortfireError
 
 
@@ -101,3 +107,11 @@ def test_edges():
     for dim in (0, 9):
         with pytest.raises(PortfireError, match=f"got {dim}"):
             cone_weights(dim)
+
+
+@pytest.mark.parametrize("dim", range(1, 9))
+def test_a_covariance_at_its_boundary_costs_half_of_its_entries(dim):
+    """The cone and its polar are mirror images, so that the mean of the mixture is half of its top."""
+    assert expected_cost(0, (dim,)) == pytest.approx(dim * (dim + 1) / 4)
+    assert expected_cost(3, (dim, dim)) == pytest.approx(3 + dim * (dim + 1) / 2)
+    assert expected_cost(3) == 3
