@@ -36,6 +36,18 @@ def read_fit(store: Path, key: str) -> Fit:
     return fit_from_parts(*Store(store).read(key))
 
 
+_seen: list[int] = []
+
+
+def _let_go(latent_dim: int) -> None:
+    """Drop compiled code of another size: it stays on disk, and in memory it would add up to gigabytes."""
+    if _seen and _seen[-1] != latent_dim:
+        import jax
+
+        jax.clear_caches()
+    _seen[:] = [latent_dim]
+
+
 def _train_and_test(trials: Trials, kwargs: dict[str, Any]) -> tuple[Trials, np.ndarray]:
     """Training trials, and the rows that are scored."""
     n, folds = trials.n_session, int(kwargs["folds"])
@@ -62,6 +74,7 @@ def fit_full(
     store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
 ) -> dict[str, float]:
     """Fit the full account to a training set and score it on what was held out."""
+    _let_go(int(kwargs["latent_dim"]))
     trials = read_trials(data)
     train, test = _train_and_test(trials, kwargs)
     fitted = fit(
@@ -85,6 +98,7 @@ def fit_ladder(
     store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
 ) -> dict[str, float]:
     """Fit every account that the contrasts need, until nested ones agree, and score them held out."""
+    _let_go(int(kwargs["latent_dim"]))
     trials = read_trials(data)
     train, test = _train_and_test(trials, kwargs)
     seed, tolerance = int(kwargs["seed"]), float(kwargs["tolerance"])
