@@ -5,7 +5,10 @@ from __future__ import annotations
 import os
 from pathlib import Path
 
-import pytest
+# Before NumPy is loaded: threads for tiny matrices only wait for one another.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
+import pytest  # noqa: E402
 
 CHECKOUT = Path(__file__).resolve().parents[1]
 
