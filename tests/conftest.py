@@ -8,7 +8,7 @@ from pathlib import Path
 # Before NumPy is loaded: threads for tiny matrices only wait for one another.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
-import pytest  # noqa: E402
+import pytest
 
 CHECKOUT = Path(__file__).resolve().parents[1]
 

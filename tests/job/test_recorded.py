@@ -69,6 +69,6 @@ def test_at_the_cue_only_the_run_up_is_used(decoded):
         rows = [row for row in decoded[letter] if row["cutoff_s"] == 0.0]
         assert {row["features"] for row in rows} == {"initial", "state", "counts"}
         state, initial = (
-            [row for row in rows if row["features"] == name][0] for name in ("state", "initial")
+            next(row for row in rows if row["features"] == name) for name in ("state", "initial")
         )
         assert state["r2_within_condition"] == pytest.approx(initial["r2_within_condition"], abs=1e-9)

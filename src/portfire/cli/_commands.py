@@ -215,15 +215,9 @@ def report(folder: Path) -> None:
 
 
 def _do_job(job: Job, workers: int | None, quiet: bool) -> None:
-    from portfire import job as jobs
+    from portfire._whole import run as run_whole
 
-    result = jobs.run(job, workers=workers, quiet=quiet)
-
-    from portfire.report import draw_report
-
-    for row in result.raw.get("sessions", []):
-        draw_report(job.out / row["folder"])
-    draw_report(job.out)
+    result = run_whole(job, workers=workers, quiet=quiet)
     write_line(str(result))
     write_line(f"results: {job.out / 'result.json'}")
     write_line(f"report: {job.out / 'report.html'}")

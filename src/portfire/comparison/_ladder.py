@@ -64,17 +64,17 @@ def climb(full: Fit, accounts: Sequence[Account], refit: Refit, agreement: float
             fits[str(other)] for other in accounts if str(other) in fits and other.contains(account)
         ]
         fits[str(account)] = refit(account, min(containers, key=lambda fitted: fitted.value))
-    for n_round in range(_MAX_ROUNDS):
-        raised = _raise_containers(fits, accounts, refit, agreement)
-        if not raised:
-            return Ladder(fits, n_round, not _behind(fits, accounts, agreement))
+    rounds = 0
+    while rounds < _MAX_ROUNDS and (raised := _raise_containers(fits, accounts, refit, agreement)):
+        rounds += 1
         for account in accounts:
             for larger in raised:
                 if larger != account and larger.contains(account):
                     again = refit(account, fits[str(larger)])
                     if again.value > fits[str(account)].value:
                         fits[str(account)] = again
-    return Ladder(fits, _MAX_ROUNDS, not _behind(fits, accounts, agreement))
+    in_order = {str(account): fits[str(account)] for account in accounts}
+    return Ladder(in_order, rounds, not _behind(fits, accounts, agreement))
 
 
 def _behind(
