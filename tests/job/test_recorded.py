@@ -68,7 +68,6 @@ def test_at_the_cue_only_the_run_up_is_used(decoded):
     for letter in "ab":
         rows = [row for row in decoded[letter] if row["cutoff_s"] == 0.0]
         assert {row["features"] for row in rows} == {"initial", "state", "counts"}
-        state, initial = (
-            next(row for row in rows if row["features"] == name) for name in ("state", "initial")
-        )
+        by_name = {row["features"]: row for row in rows}
+        state, initial = by_name["state"], by_name["initial"]
         assert state["r2_within_condition"] == pytest.approx(initial["r2_within_condition"], abs=1e-9)
