@@ -9,9 +9,9 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from portfire._whole import run
     from portfire.estimation import Fit, fit, load_fit
     from portfire.job import Result
+    from portfire.report import run
     from portfire.session import Session, inspect_session, read_session
     from portfire.simulate import simulate_session
 
@@ -37,7 +37,7 @@ _HOME_OF = {
     "fit": "estimation",
     "load_fit": "estimation",
     "Fit": "estimation",
-    "run": "_whole",
+    "run": "report",
     "Result": "job",
     "simulate_session": "simulate",
 }

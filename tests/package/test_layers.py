@@ -91,7 +91,7 @@ def test_imports_run_downwards() -> None:
     ("statement", "package", "layer"),
     [
         ("from portfire.job import run", ("portfire", "session"), "job"),
-        ("from portfire import run", ("portfire", "session"), "job"),
+        ("from portfire import run", ("portfire", "session"), "report"),
         ("from portfire import cli", ("portfire", "session"), "cli"),
         ("import portfire.report._page", ("portfire", "session"), "report"),
         ("from ..cli import main", ("portfire", "session"), "cli"),

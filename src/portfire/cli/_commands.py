@@ -215,9 +215,13 @@ def report(folder: Path) -> None:
 
 
 def _do_job(job: Job, workers: int | None, quiet: bool) -> None:
-    from portfire._whole import run as run_whole
+    from portfire import job as jobs
 
-    result = run_whole(job, workers=workers, quiet=quiet)
+    result = jobs.run(job, workers=workers, quiet=quiet)
+
+    from portfire.report import draw_reports
+
+    draw_reports(result)
     write_line(str(result))
     write_line(f"results: {job.out / 'result.json'}")
     write_line(f"report: {job.out / 'report.html'}")

@@ -46,10 +46,14 @@ def run(
     from portfire.job import run as run_without_report
 
     result = run_without_report(job, out, workers, quiet)
+    draw_reports(result)
+    return result
 
+
+def draw_reports(result: Result) -> None:
+    """Draw the report of a result, and that of each session where it names several."""
     from portfire.report import draw_report
 
     for row in result.raw.get("sessions", []):
         draw_report(result.path / row["folder"])
     draw_report(result.path)
-    return result
