@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from portfire.comparison import block_of, block_size, fold_of, training_rows
+from portfire.comparison import block_of, block_size, count_fewest, fold_of, inner_sets, training_rows
 from portfire.errors import InputError
 
 
@@ -57,3 +57,24 @@ def test_wrong_folds_are_named():
         training_rows(np.arange(50), 50, 5, {7})
     with pytest.raises(InputError, match="0 to 200; a session of 200"):
         fold_of([0, 200], 200, 5)
+
+
+def test_inner_sets_split_every_training_set_twice():
+    assert inner_sets(60, 3) == [((0, 1), None), ((1, 2), None), ((0, 2), None)]
+    assert inner_sets(60, 2) == [((0,), 0), ((0,), 1), ((1,), 0), ((1,), 1)]
+    for n_folds in (3, 4, 5, 10):
+        sets = inner_sets(200, n_folds)
+        for fold in range(n_folds):
+            others = {other for held, _ in sets if fold in held for other in held} - {fold}
+            assert len(others) == 2 or n_folds == 2
+
+
+def test_the_smallest_training_set_is_counted():
+    # Three folds of 30 trials: blocks of five in turn; with two folds held out, each block left loses four.
+    assert count_fewest(30, 3) == 2
+    assert count_fewest(100, 5) == min(
+        len(training_rows(np.arange(100), 100, 5, {j, (j + 1) % 5})) for j in range(5)
+    )
+    # Two folds: what is left of a half of 24 trials is too little to be cut again.
+    assert count_fewest(24, 2) == 0
+    assert count_fewest(8, 2) == 0

@@ -218,6 +218,10 @@ def test_a_job_is_checked_against_the_size_of_its_session(folder):
         check_job(job, n_units=4, n_trials=20)
     with pytest.raises(InputError, match=r"folds is 5, which needs 20 trials, but the session has 19"):
         check_job(job, n_units=5, n_trials=19)
+    two = read_job(write(folder, 'session = "session"\n[compare]\nfolds = 2'))
+    check_job(two, n_units=5, n_trials=60)
+    with pytest.raises(InputError, match=r"folds is 2, which leaves 0 of the session's 24 usable trials"):
+        check_job(two, n_units=5, n_trials=24)
 
 
 @pytest.mark.parametrize(("n_units", "dims"), [(1, (1,)), (3, (1, 2, 3)), (4, (2, 3, 4)), (60, (2, 3, 4, 5))])

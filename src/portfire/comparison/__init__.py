@@ -9,7 +9,7 @@ from ._boundary import (
 )
 from ._carry import carrying_time_constant
 from ._contrast import Contrast, Entry, Scored, contrast_sources
-from ._folds import block_of, block_size, fold_of, training_rows
+from ._folds import block_of, block_size, count_fewest, fold_of, inner_sets, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
 from ._ladder import Ladder, climb, contrast_accounts
 from ._size import Choice, Deficit, choose_smallest
@@ -38,7 +38,9 @@ __all__ = [
     "contrast_sources",
     "block_of",
     "block_size",
+    "count_fewest",
     "fold_of",
+    "inner_sets",
     "training_rows",
     "Gain",
     "gain",

@@ -84,6 +84,43 @@ def fold_of(index: ArrayLike, n: int, n_folds: int) -> NDArray[np.int64]:
     return np.asarray(block_of(index, n, n_folds) % n_folds, dtype=np.int64)
 
 
+def inner_sets(n: int, n_folds: int) -> list[tuple[tuple[int, ...], int | None]]:
+    """Splits inside the training sets: folds held out together, and with two folds a part of what is left.
+
+    With three folds or more, each is held out together with the next, so that its training set is split
+    twice. With two, nothing would be left: the training half itself is cut in two parts.
+
+    Parameters
+    ----------
+    n : int
+        Used trials of the whole session.
+    n_folds : int
+        Folds J.
+
+    Returns
+    -------
+    list of (tuple of int, int or None)
+        Folds held out, and the part of the training half that is held out with them.
+    """
+    _check_folds(n, n_folds)
+    if n_folds > 2:
+        return [(tuple(sorted((fold, (fold + 1) % n_folds))), None) for fold in range(n_folds)]
+    return [((fold,), part) for fold in range(n_folds) for part in (0, 1)]
+
+
+def count_fewest(n: int, n_folds: int) -> int:
+    """Trials of the smallest training set that a session of ``n`` trials comes down to."""
+    fewest = n
+    for held, part in inner_sets(n, n_folds):
+        rows = training_rows(np.arange(n), n, n_folds, held)
+        if part is not None:
+            if len(rows) < 4:
+                return 0
+            rows = training_rows(np.arange(len(rows)), len(rows), 2, {part})
+        fewest = min(fewest, len(rows))
+    return fewest
+
+
 def training_rows(index: ArrayLike, n: int, n_folds: int, held_out: Collection[int]) -> NDArray[np.intp]:
     """Rows that may train a fit that is scored on the folds held out.
 

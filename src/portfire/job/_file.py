@@ -174,6 +174,7 @@ def read_job(path: str | Path, out: str | Path | None = None) -> Job:
 
 
 DEFAULT_DIMS, FEW_UNITS = (2, 3, 4, 5), 4
+LEAST_TRAINING = 4
 
 
 def check_job(job: Job, n_units: int, n_trials: int) -> Job:
@@ -213,6 +214,17 @@ def check_job(job: Job, n_units: int, n_trials: int) -> Job:
         raise InputError(
             f"{where}: [compare] folds is {job.compare.folds}, which needs {needed} trials, "
             f"but the session has {n_trials} usable ones"
+        )
+    # Loads what computes, so only where trials have been read already.
+    from portfire.comparison import count_fewest
+
+    fewest = count_fewest(n_trials, job.compare.folds)
+    if fewest < LEAST_TRAINING:
+        advice = "use more folds, or more trials" if job.compare.folds < 5 else "use more trials"
+        raise InputError(
+            f"{where}: [compare] folds is {job.compare.folds}, which leaves {fewest} of the session's "
+            f"{n_trials} usable trials to train on where the size is chosen; {LEAST_TRAINING} are needed: "
+            f"{advice}"
         )
     return replace(job, compare=replace(job.compare, latent_dims=dims))
 

@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from portfire.comparison import Choice, choose_smallest, fold_of
+from portfire.comparison import Choice, choose_smallest, fold_of, inner_sets
 from portfire.dynamics import ModelFile, model_to_dict
 from portfire.job._file import Job
 from portfire.job._store import task_key
@@ -121,12 +121,7 @@ class Stages:
     def inner_tasks(self, size: Size, deps: dict[Split, str]) -> dict[Split, Task]:
         """Fits inside training sets, by what they hold out; one serves both folds that it holds out."""
         pairs: list[Split]
-        if len(self.folds) > 2:
-            # Each fold is held out together with the next: its training set is split twice.
-            n = len(self.folds)
-            pairs = [(tuple(sorted((fold, (fold + 1) % n))), None) for fold in self.folds]
-        else:
-            pairs = [((fold,), part) for fold in self.folds for part in (0, 1)]
+        pairs = inner_sets(self.trials.n_session, len(self.folds))
         return {
             (held, inner): self.full_task(
                 size, held, [deps[held, inner]] if (held, inner) in deps else [], inner
