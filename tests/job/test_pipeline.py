@@ -267,11 +267,13 @@ def test_stored_fits_can_be_read(folder, result):
 
 def test_a_second_run_uses_what_is_there(folder, result):
     before = {path: path.stat().st_mtime_ns for path in (folder / "out" / "fits").rglob("fit.json")}
+    (folder / "out" / "report.html").unlink()
     start = time.perf_counter()
     again = portfire.run(folder / "job.toml", out=folder / "out", workers=2, quiet=True)
     assert time.perf_counter() - start < 30
     assert {path: path.stat().st_mtime_ns for path in before} == before
     assert json.loads((folder / "out" / "result.json").read_text(encoding="utf-8")) == result
+    assert (folder / "out" / "report.html").exists()
     assert len(again.contrasts) > 0
     assert len(again.decode) == len(result["decode"])
 
