@@ -69,7 +69,7 @@ def demo(installed: Installed, tmp_path_factory: pytest.TempPathFactory) -> Demo
     folder = tmp_path_factory.mktemp("demo")
     out = folder / "out"
     cold = environment(XDG_CACHE_HOME=str(folder / "cache"))
-    run(installed.command, "demo", "--out", out, cwd=folder, env=cold, timeout=120)
+    run(installed.command, "demo", "--out", out, cwd=folder, env=cold, timeout=900)
     return Demo(out, json.loads((out / "result.json").read_text(encoding="utf-8"), parse_constant=refuse))
 
 
