@@ -253,7 +253,7 @@ def test_a_run_that_is_ended_by_a_signal_leaves_nothing_behind_and_resumes(tmp_p
         os.killpg(process.pid, number)
     else:
         process.send_signal(number)
-    _, said = process.communicate(timeout=15)
+    _, said = process.communicate(timeout=60)
     assert time.monotonic() - asked < 3
     end = time.monotonic() + 5
     while any(is_running(pid) for pid in children) and time.monotonic() < end:
@@ -269,7 +269,7 @@ def test_a_run_that_is_ended_by_a_signal_leaves_nothing_behind_and_resumes(tmp_p
     assert [store.fault(key) for key in store.list_keys()] == [None, None]
 
     again = start(tmp_path, "fast")
-    told, said = again.communicate(timeout=30)
+    told, said = again.communicate(timeout=120)
     assert (again.returncode, told, said) == (0, "[0, 1, 2, 3, 4, 5]\n", "")
     assert len((tmp_path / "trace").read_text().split()) == 6
     assert sorted(p.name for p in store.path.iterdir()) == sorted(store.list_keys())
