@@ -15,6 +15,7 @@ import portfire
 from portfire.accounts import Account
 from portfire.cli import main
 from portfire.dynamics import ModelFile
+from portfire.errors import InputError
 from portfire.estimation import load_fit
 from portfire.simulate import Scenario, draw_session
 
@@ -303,3 +304,13 @@ def test_a_bare_session_without_context_response_or_contrasts(tmp_path):
     assert pd.read_parquet(tmp_path / "out" / "decode.parquet").empty
     assert "<html" in (tmp_path / "out" / "report.html").read_text(encoding="utf-8")
     assert all(np.isfinite(value) for _, value in numbers(result))
+
+
+def test_models_of_different_readouts_are_refused(folder):
+    (folder / "roots.toml").write_text('[model]\nreadout = "gaussian"\n', encoding="utf-8")
+    job = folder / "mixed.toml"
+    text = (folder / "job.toml").read_text(encoding="utf-8")
+    assert "[model]" not in text
+    job.write_text(text + '\n[model]\nfile = ["linear", "./roots.toml"]\n', encoding="utf-8")
+    with pytest.raises(InputError, match=r"'linear' has poisson; give models with one readout"):
+        portfire.run(job, out=folder / "mixed", workers=1, quiet=True)

@@ -65,7 +65,7 @@ def write_outputs(
         },
         "behaviour": behaviour,
         "chosen": _chosen(findings),
-        "accounts": _account_rows(findings, evidence, others),
+        "accounts": _account_rows(findings, evidence, others, models[0].readout == "poisson"),
         "contrasts": list(evidence.rows),
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),
@@ -156,7 +156,7 @@ def null_loglik(trials: Trials, n_folds: int) -> np.ndarray:
 
 
 def _account_rows(
-    findings: Findings, evidence: Evidences, others: Sequence[pd.DataFrame]
+    findings: Findings, evidence: Evidences, others: Sequence[pd.DataFrame], counts: bool
 ) -> list[dict[str, Any]]:
     trials = findings.trials
     null = pd.Series(null_loglik(trials, findings.job.compare.folds), index=list(trials.trial))
@@ -166,6 +166,7 @@ def _account_rows(
         for (account, model), group in table.groupby(["account", "model"], sort=False):
             above = group["loglik"].to_numpy() - null.loc[list(group["trial"])].to_numpy()
             spikes = int(group["n_spikes"].sum())
+            bits = float(above.sum() / (spikes * np.log(2))) if spikes and counts else None
             rows.append(
                 {
                     "account": account,
@@ -173,7 +174,7 @@ def _account_rows(
                     "latent_dim": dims.get(model, int(group["latent_dim"].iloc[0])),
                     "loglik_per_trial": float(group["loglik"].mean()),
                     "loglik_se": float(np.sqrt((group["loglik_se"] ** 2).sum()) / len(group)),
-                    "bits_per_spike": float(above.sum() / (spikes * np.log(2))) if spikes else None,
+                    "bits_per_spike": bits,
                     "n_trials": len(group),
                 }
             )

@@ -8,7 +8,8 @@ from dataclasses import replace
 import numpy as np
 
 from portfire.accounts import Account
-from portfire.dynamics import read_model
+from portfire.dynamics import ModelFile, read_model
+from portfire.errors import InputError
 from portfire.job._assemble import write_outputs
 from portfire.job._evidence import collect_contrasts
 from portfire.job._file import Job, check_job, session_name
@@ -44,6 +45,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
         replace(read_model(path), name=name)
         for path, name in zip(job.model.files, job.model.names, strict=True)
     ]
+    _refuse_mixed_readouts(job, models)
     progress = workspace.progress
     progress.say(
         f"{session_name(job.sessions[0])}: {len(trials)} trials, {len(trials.unit)} units, "
@@ -76,6 +78,17 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     write_outputs(findings, contrasts, models, workspace)
     for row in contrasts.rows:
         progress.say(f"{row['source']}: {row['verdict']}")
+
+
+def _refuse_mixed_readouts(job: Job, models: Sequence[ModelFile]) -> None:
+    """Models are compared by the likelihood of the same data: counts, or square roots of counts."""
+    readouts = {model.readout: model.name for model in models}
+    if len(readouts) > 1:
+        named = " and ".join(f"{name!r} has {readout}" for readout, name in sorted(readouts.items()))
+        raise InputError(
+            f"{job.source or job.sessions[0]}: [model] file: the likelihoods of different readouts cannot be "
+            f"compared, but {named}; give models with one readout"
+        )
 
 
 def _present_sources(trials: Trials, wanted: Sequence[str]) -> tuple[tuple[str, ...], tuple[str, ...]]:
