@@ -123,6 +123,7 @@ class Job:
         """
         base = self.out if self.source is None else self.source.absolute().parent
         sessions = [_relative(path, base) for path in self.sessions]
+        models = [_shipped_name(path) or _relative(path, base) for path in self.model.files]
         plain: dict[str, Any] = finite(
             {
                 "session": sessions[0] if len(sessions) == 1 else sessions,
@@ -130,7 +131,7 @@ class Job:
                 "seed": self.seed,
                 "columns": dict(self.columns),
                 "window": asdict(self.window),
-                "model": {"file": [_shipped_name(path) or _relative(path, base) for path in self.model.files]},
+                "model": {"file": models},
                 "compare": asdict(self.compare),
                 "decode": asdict(self.decode),
                 "tests": asdict(self.tests),

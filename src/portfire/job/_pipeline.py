@@ -18,7 +18,7 @@ from portfire.job._shared import write_trials
 from portfire.job._stages import ALL, Size, Sizes, Stages
 from portfire.job._workspace import Workspace
 from portfire.session import Trials, read_session
-from portfire.timing import Decoding, decode, round_cutoff
+from portfire.timing import Decoding, decode, describe_limits, round_cutoff
 
 N_PARTS = 4
 
@@ -70,10 +70,8 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     if not decodings:
         why = "no trial has a response" if job.decode.cutoffs_s else "the job names no cutoff"
         not_run.append(f"No decode: {why}.")
-    warnings = [text for found in decodings for text in found.warnings]
-    findings = Findings(
-        job, trials, sizes, ladders, decodings, describe, causal, tuple(warnings), tuple(not_run)
-    )
+    warnings = describe_limits(decodings, job.tests.level)
+    findings = Findings(job, trials, sizes, ladders, decodings, describe, causal, warnings, tuple(not_run))
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
     for row in contrasts.rows:
@@ -176,7 +174,6 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
                 trials.bin_s,
                 variant=variant,
                 draws=job.decode.draws,
-                level=job.tests.level,
                 seed=job.seed,
             )
     return tuple(found)
