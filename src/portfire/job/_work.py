@@ -119,7 +119,14 @@ def fit_ladder(
 
     def refit(account: Account, start: Fit) -> Fit:
         return fit(
-            train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance
+            train,
+            start.setup.model,
+            account,
+            seed=seed,
+            start=start,
+            drift=drift,
+            tolerance=tolerance,
+            max_iterations=int(kwargs["max_iterations"]),
         )
 
     if kwargs["score_training"]:
