@@ -148,10 +148,9 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
     at_dims: dict[int, Verdict] = {
         best.latent_dim + shift: found.verdict for shift, found in by_shift.items() if shift
     }
-    above = by_shift.get(1)
-    excludes = here.excludes_other_end() and above is not None and _agrees_in_profile(here, above)
-    verdict = reconcile(here.verdict, at_dims, best.latent_dim, excludes)
-    mimic, time_constant = _look_for_mimic(findings, store, source, here, above)
+    ends_nats = {best.latent_dim + shift: found.end_difference for shift, found in sorted(by_shift.items())}
+    verdict = reconcile(here.verdict, at_dims, best.latent_dim, ends_nats)
+    mimic, time_constant = _look_for_mimic(findings, store, source, here, by_shift.get(1))
     confounded = _confounding(findings) if source == "context" else None
     if confounded is not None and confounded > CONFOUNDED:
         verdict = overrule(
@@ -175,9 +174,7 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         },
         "gain_k": {name: entry.cost for name, entry in here.entries.items()},
         "at_dims": {str(d): v.label for d, v in sorted(at_dims.items())},
-        "ends_nats": {
-            str(best.latent_dim + shift): found.end_difference for shift, found in sorted(by_shift.items())
-        },
+        "ends_nats": {str(d): nats for d, nats in ends_nats.items()},
         "mimic": mimic,
         "carrying_mode": time_constant,
     }
@@ -186,12 +183,6 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
     if verdict.label == "undetermined":
         row["open"] = list(verdict.open)
     return row
-
-
-def _agrees_in_profile(here: Contrast, above: Contrast) -> bool:
-    """Whether one dimension more leaves out the same end of the persistence."""
-    difference = above.end_difference if here.verdict.label == "sustained" else -above.end_difference
-    return difference > 1.92
 
 
 def _look_for_mimic(

@@ -18,7 +18,7 @@ from portfire.job._shared import write_trials
 from portfire.job._stages import ALL, Size, Sizes, Stages
 from portfire.job._workspace import Workspace
 from portfire.session import Trials, read_session
-from portfire.timing import Decoding, decode, round_cutoff
+from portfire.timing import Decoding, decode, describe_limits, round_cutoff
 
 N_PARTS = 4
 
@@ -62,18 +62,16 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
-        f"The source {source} is not contrasted: the session has "
-        f"{'one sample interval' if source == 'interval' else 'one context'}."
+        f"The source {source} is not contrasted: the session has {_explain_absent(trials, source)}."
         for source in absent
     ]
     if not present:
-        not_run.append("No contrasts: the job names no source that this session has.")
+        not_run.append(f"No contrasts: the job names no source{' that this session has' if absent else ''}.")
     if not decodings:
-        not_run.append("No decode: no trial has a response, or the job names no cutoff.")
-    warnings = [text for found in decodings for text in found.warnings]
-    findings = Findings(
-        job, trials, sizes, ladders, decodings, describe, causal, tuple(warnings), tuple(not_run)
-    )
+        why = "no trial has a response" if job.decode.cutoffs_s else "the job names no cutoff"
+        not_run.append(f"No decode: {why}.")
+    warnings = describe_limits(decodings, job.tests.level)
+    findings = Findings(job, trials, sizes, ladders, decodings, describe, causal, warnings, tuple(not_run))
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
     for row in contrasts.rows:
@@ -97,6 +95,13 @@ def _present_sources(trials: Trials, wanted: Sequence[str]) -> tuple[tuple[str, 
     has = {"interval": len(intervals) > 1, "context": len(trials.contexts) > 1, "trial": True}
     present = tuple(source for source in Account.__dataclass_fields__ if source in wanted and has[source])
     return present, tuple(source for source in wanted if not has[source])
+
+
+def _explain_absent(trials: Trials, source: str) -> str:
+    """What a session has instead of several values of a source."""
+    if source == "context":
+        return "no context column" if trials.context is None else "one context"
+    return "no sample_s column" if trials.sample_s is None else "one sample interval"
 
 
 def shifted(size: Size, shift: int, n_units: int) -> Size | None:
@@ -169,7 +174,6 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
                 trials.bin_s,
                 variant=variant,
                 draws=job.decode.draws,
-                level=job.tests.level,
                 seed=job.seed,
             )
     return tuple(found)
