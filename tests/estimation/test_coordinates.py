@@ -10,7 +10,7 @@ import pytest
 from portfire.estimation import Fit, predict_rates
 from portfire.estimation._gauge import canonical_map
 from portfire.estimation._objective import to_device
-from portfire.inference import laplace, pack, start_path
+from portfire.inference import fit_bound, laplace, pack, start_guess, start_path
 
 
 def moved(fitted: Fit, change: np.ndarray, noise: float) -> Fit:
@@ -48,7 +48,8 @@ def test_canonical_readout_is_orthonormal_and_ordered(world, full):
     # covariance between latents is nil.
     log_rate = state @ readout.T
     assert log_rate.var(axis=0).sum() == pytest.approx(variance.sum())
-    assert abs(np.corrcoef(state.T)[0, 1]) < 1e-6
+    # The axes come from posterior means, the states here are modes: nil but for that difference.
+    assert abs(np.corrcoef(state.T)[0, 1]) < 2e-3
 
 
 def test_posteriors_do_not_hang_on_the_coordinates(world, full, turned):
@@ -86,7 +87,7 @@ def test_canonical_map_is_found_again_in_other_coordinates(world, full, turned):
     for fitted in (full, turned):
         packed = pack(trials, fitted.setup)
         paths = [
-            laplace(to_device(fitted.params), fitted.setup, chunk, start_path(fitted.setup, chunk)).mode
+            fit_bound(to_device(fitted.params), fitted.setup, chunk, start_guess(fitted.setup, chunk)).mean
             for chunk in packed.chunks
         ]
         maps.append(canonical_map(fitted.params["readout"], paths, packed))

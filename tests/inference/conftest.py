@@ -6,14 +6,17 @@ from collections.abc import Iterator
 
 import pytest
 
-from portfire.inference import _smoother, laplace
+from portfire.inference import _smoother, _variational, fit_bound, laplace
 
 
 @pytest.fixture(scope="module")
 def tight() -> Iterator[None]:
-    """Newton runs on to rounding, so that a Laplace value is that of the exact mode."""
+    """Searches run on to rounding: a Laplace value is that of the exact mode, and a bound the best."""
     with pytest.MonkeyPatch.context() as patch:
         patch.setattr(_smoother, "DECREMENT_TOLERANCE", 1e-14)
+        patch.setattr(_variational, "DECREMENT_TOLERANCE", 1e-13)
         laplace.clear_cache()
+        fit_bound.clear_cache()
         yield
     laplace.clear_cache()
+    fit_bound.clear_cache()

@@ -94,14 +94,15 @@ class Objective:
             for name in params
         }
         self.last = [(bound.mean, bound.moments) for bound in bounds]
-        if np.isfinite(value):
-            self.guesses = [bound.guess for bound in bounds]
         self.n_calls += 1
         self.n_sweeps += sum(int(bound.sweeps) for bound in bounds)
         self.n_unconverged = sum(
             int(np.sum(~np.asarray(bound.converged) & (np.asarray(weight) > 0)))
             for bound, weight in zip(bounds, weights, strict=True)
         )
+        # From parameters far off a search may end nowhere: what it has is no start for another.
+        if np.isfinite(value) and not self.n_unconverged:
+            self.guesses = [bound.guess for bound in bounds]
         gradient["drift"] = gradient["drift"] - params["drift"]
         return value - drift_penalty(params), gradient
 

@@ -116,14 +116,17 @@ class _Data(NamedTuple):
     pulled: jax.Array
     linear_offset: jax.Array
     offset: jax.Array
+    mask: jax.Array
     plane: jax.Array
     rest: jax.Array
     stack: jax.Array
     pairs: np.ndarray
 
     def rows(self, x: jax.Array) -> jax.Array:
-        """[x; rest], shape (D + …, time·lane), of a path (time, D, lane)."""
-        return jnp.concatenate([x.transpose(1, 0, 2).reshape(x.shape[1], -1), self.rest])
+        """[x; rest], shape (D + …, time·lane), of a path (time, D, lane); x is zero where nothing is seen."""
+        flat = x.transpose(1, 0, 2).reshape(x.shape[1], -1)
+        # Past a trial's end an unstable path runs off without limit.
+        return jnp.concatenate([flat * self.mask, self.rest])
 
 
 def pair_index(d: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -149,7 +152,7 @@ def _prepare(params: Params, setup: Setup, chunk: Chunk) -> _Data:
     i, j, table = pair_index(setup.latent_dim)
     stack = jnp.concatenate([jnp.ones((1, n)), c.T, (c[:, i] * c[:, j]).T])
     totals = jnp.sum(chunk.counts.sum(axis=1) * offset, axis=0)
-    return _Data(pulled, totals, offset, plane, rest, stack, table)
+    return _Data(pulled, totals, offset, chunk.mask.reshape(-1), plane, rest, stack, table)
 
 
 def _over_time(rows: jax.Array, n_time: int) -> jax.Array:

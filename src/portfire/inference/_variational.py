@@ -36,6 +36,10 @@ from portfire.inference._smoother import (
 
 DECREMENT_TOLERANCE = 1e-4
 MAX_SWEEPS = 60
+# Half the squared length, in posterior SDs, of a step that counts as near the mode.
+_NEAR = 1.0
+# Nats that a first step may lose through covariances that changed.
+_ALLOWANCE = 10.0
 
 
 class Guess(NamedTuple):
@@ -93,7 +97,7 @@ def _doubled(data: _Data, pairs: jax.Array) -> tuple[jax.Array, jax.Array]:
     """Factors whose product is the variance of η: products of loadings, and pairs, the mixed ones twice."""
     d = data.pulled.shape[1]
     i, j, _ = pair_index(d)
-    return data.stack[1 + d :].T, jnp.where(i == j, 1.0, 2.0)[:, None] * pairs
+    return data.stack[1 + d :].T, jnp.where(i == j, 1.0, 2.0)[:, None] * pairs * data.mask
 
 
 class _Expected(NamedTuple):
@@ -130,7 +134,10 @@ def _expect(
 
 
 class _Search(NamedTuple):
-    """State of the search. What is held was accepted; ``slack`` and ``fresh`` belong to it."""
+    """State of the search. What is held was accepted; ``slack`` and ``fresh`` belong to it.
+
+    A lane that is not ``settled`` climbs its log posterior alone, as if its path were known exactly.
+    """
 
     n_sweeps: jax.Array
     mean: Path
@@ -141,6 +148,7 @@ class _Search(NamedTuple):
     fresh: jax.Array
     length: jax.Array
     gain: jax.Array
+    settled: jax.Array
 
 
 @partial(jax.jit, static_argnames=("setup",))
@@ -148,7 +156,8 @@ def fit_bound(params: Params, setup: Setup, chunk: Chunk, guess: Guess) -> Bound
     """Variational posterior and lower bound of every lane.
 
     Natural-gradient steps of full length in the mean and the readout's share of the precision; one that
-    lowers a lane's bound is halved until it does not. At least one step is made.
+    lowers a lane's bound is halved until it does not. At least one step is made. From a guess without
+    covariances the mode is approached first: far from it the covariances would be far too wide.
 
     Parameters
     ----------
@@ -175,24 +184,36 @@ def fit_bound(params: Params, setup: Setup, chunk: Chunk, guess: Guess) -> Bound
         mean = Path(
             state.mean.x + state.length * step.direction.x, state.mean.e + state.length * step.direction.e
         )
-        level, slack, fresh = look(mean, _pairs(moments.covariance))
+        pairs = _pairs(moments.covariance).reshape(-1, n_time, n_lanes) * state.settled
+        level, slack, fresh = look(mean, pairs.reshape(len(pairs), -1))
         log_det = step.factor.log_determinant - 2 * jnp.sum(jnp.log(step.corner.inverse_diagonal), axis=0)
         # Half of the prior's precision times the covariance, and the entropy, in one.
         spent = 0.5 * jnp.sum(curvature * moments.covariance, axis=(0, 1, 2))
-        value = level + spent + size - 0.5 * log_det
-        accept = (value >= state.value - 1e-9 * (1 + jnp.abs(state.value))) & jnp.isfinite(value)
+        value = level + jnp.where(state.settled, spent + size - 0.5 * log_det, 0.0)
+        accept = (value >= state.value - 1e-7 * (1 + jnp.abs(state.value))) & jnp.isfinite(value)
+        # A first bound has nothing to be held against but what the guess explained.
+        accept = accept & (level >= level_of_guess - _ALLOWANCE)
         taken = jnp.sum(state.slack.x * step.direction.x, axis=(0, 1))
         taken = 0.5 * (taken + jnp.sum(state.slack.e * step.direction.e, axis=0))
+        near = state.settled | (taken < _NEAR)
+        # Guessed covariances are good for a first step, those at the mode are not.
+        done = state.settled & (guessed | jnp.isfinite(state.value))
         new = _Search(
             state.n_sweeps + 1,
             mean,
             moments,
-            value,
+            jnp.where(near == state.settled, value, -jnp.inf),
             slack,
-            curvature,
+            jnp.where(near == state.settled, curvature, fresh + narrow),
             fresh,
-            jnp.ones(n_lanes),
-            jnp.where(state.length < 1, jnp.inf, taken),
+            # A lane that has just come near its mode first stays there, with covariances that are too small.
+            jnp.where(
+                near == state.settled,
+                jnp.where(state.length > 0, jnp.minimum(1.0, 2.0 * state.length), 1.0),
+                0.0,
+            ),
+            jnp.where(done & (state.length == 1), taken, jnp.inf),
+            near,
         )
         # A lane that is turned back is not at its end, or so near it that the moments are the same.
         old = state._replace(n_sweeps=new.n_sweeps, moments=moments, length=0.5 * state.length)
@@ -202,19 +223,22 @@ def fit_bound(params: Params, setup: Setup, chunk: Chunk, guess: Guess) -> Bound
         open_ = jnp.any((state.gain > DECREMENT_TOLERANCE) & (chunk.weight > 0))
         return (state.n_sweeps < MAX_SWEEPS) & open_
 
-    _, slack, fresh = look(guess.path, guess.pairs)
+    narrow = (params["readout"].T @ params["readout"])[:, :, None]
+    guessed = jnp.any(guess.pairs.reshape(-1, n_time, n_lanes) != 0, axis=(0, 1))
+    level_of_guess, slack, fresh = look(guess.path, guess.pairs)
     never = jnp.full(n_lanes, jnp.inf)
     square, band = jnp.zeros((d, d, n_lanes)), jnp.zeros((n_time, d, d, n_lanes))
     start = _Search(
         jnp.zeros((), dtype=jnp.int32),
         guess.path,
         Moments(band, band, band, square),
-        -never,
+        jnp.where(guessed, -jnp.inf, level_of_guess),
         slack,
         fresh,
         fresh,
         jnp.ones(n_lanes),
         never,
+        guessed,
     )
     end = lax.while_loop(unfinished, body, start)
     return Bound(end.mean, end.moments, end.value, end.n_sweeps, end.gain <= DECREMENT_TOLERANCE)
