@@ -15,22 +15,34 @@ from portfire.inference._smoother import (
     posterior_moments,
     start_path,
 )
+from portfire.inference._variational import (
+    Bound,
+    Guess,
+    bound_gradient,
+    fit_bound,
+    start_guess,
+    turn_guess,
+)
 
 _configure.configure()
 
 __all__ = [
+    "Bound",
     "Chunk",
     "Factor",
     "Filtered",
+    "Guess",
     "Moments",
     "Packed",
     "Path",
     "Posterior",
     "Sampled",
+    "bound_gradient",
     "correction_size",
     "draw_deviations",
     "factorise",
     "filter_particles",
+    "fit_bound",
     "importance",
     "invert_band",
     "lane_keys",
@@ -41,7 +53,9 @@ __all__ = [
     "particle_posterior",
     "posterior_moments",
     "refine",
+    "start_guess",
     "start_path",
     "substitute_backward",
     "substitute_forward",
+    "turn_guess",
 ]
