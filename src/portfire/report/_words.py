@@ -272,6 +272,6 @@ def state_by_fold(run: RunFolder) -> str | None:
     for size in sorted(dict.fromkeys(chosen), key=lambda size: size != whole):
         model, dim, drift = size
         folds = join_words([str(fold) for fold, found in enumerate(chosen, start=1) if found == size], "or")
-        what = f"{model} with {count_words(dim, 'latent dimension')}{'' if drift else ', no drift'}"
+        what = f"{model} with {count_words(int(dim or 0), 'latent dimension')}{'' if drift else ', no drift'}"
         parts.append(f"without fold {folds} it is {'the same' if size == whole else what}")
     return f"The choice inside the training sets: {'; '.join(parts)}."
