@@ -10,7 +10,7 @@ from dataclasses import replace
 import numpy as np
 
 from portfire.accounts import Account, make_design
-from portfire.dynamics import ModelFile, make_setup
+from portfire.dynamics import READOUTS, ModelFile, make_setup
 from portfire.estimation import Fit, draw_paths, fit
 from portfire.estimation._fit import describe_session
 from portfire.session import Session, Trials
@@ -87,7 +87,10 @@ def draw_counts(truth: Fit, trials: Trials, seed: int) -> tuple[Trials, np.ndarr
     path = np.concatenate([(path[:, :1] + np.cumsum(steps, axis=1))[:, ::-1], path], axis=1)
     drift = truth.setup.drift_basis(trials) @ p["drift"].T
     rate = np.exp(path @ p["readout"].T + p["log_rate"] + drift[:, None])
-    counts = rng.poisson(trials.bin_s * rate) * trials.mask[:, :, None]
+    readout = READOUTS[truth.setup.model.readout]
+    # Square roots are taken of Poisson counts.
+    drawn = (readout if readout.of_counts else READOUTS["poisson"]).draw(p, trials.bin_s * rate, rng)
+    counts = drawn * trials.mask[:, :, None]
     return replace(trials, counts=counts.astype(np.uint16)), path
 
 

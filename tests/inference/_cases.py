@@ -131,7 +131,7 @@ def rich_case(readout: str, n_before: int, seed: int = 0, name: str = "rich") ->
     mask[-2:, 1] = 0
     mask[-4:, 2] = 0
     mask[n_before + 1, 2] = 0
-    if readout == "poisson":
+    if READOUTS[readout].of_counts:
         counts = rng.poisson(0.8, size=(n, n_time, n_lanes)).astype(float)
     else:
         counts = 3.5 + rng.normal(size=(n, n_time, n_lanes))

@@ -58,6 +58,20 @@ ABILITY = np.zeros((6, 6))
 ABILITY[np.tril_indices(6)] = _lower
 ABILITY = np.maximum(ABILITY, ABILITY.T)
 
+# Insects counted after each of six sprays, twelve plots a spray (Beall 1942, Biometrika 32:243; the data set
+# InsectSprays of R).
+SPRAYS = np.array(
+    [
+        [10, 7, 20, 14, 14, 12, 10, 23, 17, 20, 14, 13],
+        [11, 17, 21, 11, 16, 14, 17, 17, 19, 21, 7, 13],
+        [0, 1, 7, 2, 3, 1, 2, 1, 3, 0, 1, 4],
+        [3, 5, 12, 6, 4, 3, 5, 5, 5, 5, 2, 4],
+        [3, 5, 3, 5, 3, 6, 1, 1, 3, 2, 6, 4],
+        [11, 9, 15, 22, 15, 16, 13, 10, 26, 26, 24, 13],
+    ],
+    dtype=float,
+)
+
 # Two made-up Poisson cases, small enough for exact quadrature.
 CASE_A = np.array(
     [

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from portfire.dynamics import READOUTS
 from portfire.inference import Path, laplace, laplace_gradient, start_path
 
 from ._cases import Case, rich_case
@@ -21,7 +22,7 @@ def evaluate(case: Case, path: Path) -> tuple[float, Path]:
 
 
 @pytest.mark.parametrize("n_before", [0, 3])
-@pytest.mark.parametrize("readout", ["poisson", "gaussian"])
+@pytest.mark.parametrize("readout", list(READOUTS))
 def test_gradient_agrees_with_central_differences(readout: str, n_before: int) -> None:
     case = rich_case(readout, n_before, seed=3)
     # An empty lane must not count.

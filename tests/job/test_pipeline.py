@@ -315,5 +315,7 @@ def test_models_of_different_readouts_are_refused(folder):
     text = (folder / "job.toml").read_text(encoding="utf-8")
     assert "[model]" not in text
     job.write_text(text + '\n[model]\nfile = ["linear", "./roots.toml"]\n', encoding="utf-8")
-    with pytest.raises(InputError, match=r"'linear' has poisson; give models with one readout"):
+    with pytest.raises(
+        InputError, match=r"'linear' has poisson; give models whose readouts are all of counts"
+    ):
         portfire.run(job, out=folder / "mixed", workers=1, quiet=True)

@@ -80,7 +80,8 @@ def test_rates_of_a_right_model_differ_by_counting_noise_alone() -> None:
     )
     check = check_rates(rates)
     assert check is not None
-    assert check.excess == pytest.approx(1.0, abs=5 * np.sqrt(2 / model.size))
+    assert check.excess == pytest.approx(1.0, abs=5 * check.spread)
+    assert check.spread == pytest.approx(np.sqrt(2 / model.size), rel=0.1)
 
 
 def test_pushes_are_centred_within_conditions() -> None:

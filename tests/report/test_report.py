@@ -168,8 +168,8 @@ def test_text_alternatives_carry_the_numbers(drawn: Path, page: Page) -> None:
     assert "48 trials from the state at the cutoff, with spikes up to 0.1 s" in alts["predicted"]
     assert "Within conditions R² is 0.05 (95 % interval 0.00 to 0.10)" in alts["predicted"]
     assert "Largest misfit, times counting noise: unit u3" in alts["rates-units"]
-    assert re.search(r"account for \d\d\.\d % of the variance", alts["rates-overall"])
-    assert all(alt in page.words for alt in alts.values())
+    assert re.search(r"account for \d\d\.\d\s% of the variance", alts["rates-overall"])
+    assert all(re.sub(r"\s+", " ", alt) in page.words for alt in alts.values())
 
 
 HOSTILE = (
@@ -313,6 +313,34 @@ def test_untested_decode_rows_and_nulls_in_the_result(
     page = read_page(out)
     assert "R² 0.01 at 0.1 s" in page.words
     assert "not given" in page.words
+
+
+def test_counts_that_predict_where_the_state_does_not_are_said(
+    result_only: Callable[[], Path], amend: Callable[..., None]
+) -> None:
+    out = result_only()
+    row = {"cutoff_s": 0.1, "features": "state", "n_trials": 90, "r2_within_condition": 0.01, "p": 0.4}
+    found = row | {"features": "counts", "r2_within_condition": 0.23, "p": 0.02}
+    amend(out, decode=[row, found])
+    assert (
+        "The yardstick, one raw count a unit over the same window, does predict it, with spikes up to 0.1 s"
+        in (read_page(out).words)
+    )
+    amend(out, decode=[row, found | {"p": 0.2}])
+    assert "does predict it" not in read_page(out).words
+
+
+def test_useless_predictions_do_not_flatten_the_others(
+    result_only: Callable[[], Path], amend: Callable[..., None]
+) -> None:
+    out = result_only()
+    row = {"cutoff_s": 0.1, "features": "state", "n_trials": 90, "r2_within_condition": 0.1, "p": 0.4}
+    amend(out, decode=[row, row | {"cutoff_s": 0.2, "r2_within_condition": -5.25, "ci95": [-18.0, -1.0]}])
+    page = read_page(out)
+    assert "Marks that lie below −1 stand at the lower edge with their value" in page.words
+    figure = (out / "figures" / "decode.svg").read_text(encoding="utf-8")
+    assert "−5.2" in figure
+    assert "−18" not in figure
 
 
 def test_same_folder_gives_the_same_page(drawn: Path) -> None:

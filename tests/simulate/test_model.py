@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import jax.numpy as jnp
 import numpy as np
 import pytest
@@ -85,6 +87,25 @@ def test_binned_counts_are_poisson_about_the_rates_stated(everything):
     ahead = trials.bin_s * rate[:, 1:][late]
     there = trials.counts[:, 1:][late]
     assert (there * np.log(ahead / shifted) - ahead + shifted).sum() > 50
+
+
+def test_overdispersed_counts_have_the_variance_stated():
+    model = ModelFile(name="spread", readout="negative_binomial", drift="off")
+    scenario = Scenario(
+        model=model, n_trials=200, n_units=10, mean_rate_hz=30.0, dispersion=0.7, drift_sd=0.0
+    )
+    session, drawn = draw_session(scenario, seed=2)
+    trials = session.bin()
+    setup = setup_of(trials, drawn)
+    setup = replace(setup, n_drift=0)
+    params = true_parameters(drawn, setup, trials)
+    np.testing.assert_allclose(params["log_dispersion"], np.log(0.7))
+    used = [list(drawn.trials["trial"]).index(label) for label in trials.trial]
+    path = drawn.path[used, : trials.mask.shape[1]]
+    mean = trials.bin_s * np.exp(path @ params["readout"].T + params["log_rate"])[trials.mask]
+    error = (trials.counts[trials.mask] - mean) ** 2
+    assert (error / (mean + mean**2 / 0.7)).mean() == pytest.approx(1.0, abs=0.05)
+    assert (error / mean).mean() > 1.5
 
 
 def test_mean_rates_are_those_asked_for(demo):

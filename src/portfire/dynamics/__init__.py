@@ -10,7 +10,7 @@ from portfire.dynamics._linear import (
     path_prior,
 )
 from portfire.dynamics._models import find_model, shipped_models
-from portfire.dynamics._readouts import READOUTS, Curvature, Readout
+from portfire.dynamics._readouts import READOUTS, Curvature, Readout, own_gradient
 from portfire.dynamics._settings import SETTINGS, LinearSettings
 from portfire.dynamics._setup import Setup, make_setup, n_drift_functions
 from portfire.dynamics._spec import ModelFile, SimulateSettings, model_from_dict, model_to_dict, read_model
@@ -34,6 +34,7 @@ __all__ = [
     "model_from_dict",
     "model_to_dict",
     "n_drift_functions",
+    "own_gradient",
     "parameter_shapes",
     "path_inputs",
     "path_prior",

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 
 from portfire.dynamics import _linear
+from portfire.dynamics._readouts import READOUTS
 from portfire.dynamics._setup import Setup
 
 SHAPES: dict[str, Callable[[Setup], dict[str, tuple[int, ...]]]] = {"linear": _linear.parameter_shapes}
@@ -12,4 +13,5 @@ SHAPES: dict[str, Callable[[Setup], dict[str, tuple[int, ...]]]] = {"linear": _l
 
 def parameter_shapes(setup: Setup) -> dict[str, tuple[int, ...]]:
     """Names and shapes of the parameters of a model, by its kind of dynamics and its readout."""
-    return SHAPES[setup.model.dynamics](setup)
+    own = dict.fromkeys(READOUTS[setup.model.readout].own, (setup.n_units,))
+    return SHAPES[setup.model.dynamics](setup) | own

@@ -41,7 +41,7 @@ class PathPrior(NamedTuple):
 
 
 def parameter_shapes(setup: Setup) -> dict[str, tuple[int, ...]]:
-    """Names and shapes of the parameters of linear dynamics with any readout."""
+    """Names and shapes of the parameters of linear dynamics, less the readout's own."""
     d, n = setup.latent_dim, setup.n_units
     shapes = {
         "readout": (n, d),
@@ -57,8 +57,6 @@ def parameter_shapes(setup: Setup) -> dict[str, tuple[int, ...]]:
     }
     if setup.n_before:
         shapes["log_run_up_noise"] = ()
-    if setup.model.readout == "gaussian":
-        shapes["log_variance"] = (n,)
     return shapes
 
 

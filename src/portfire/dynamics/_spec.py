@@ -14,7 +14,7 @@ from portfire.errors import InputError, nearest
 
 _CHOICES = {
     ("model", "dynamics"): tuple(SETTINGS),
-    ("model", "readout"): ("poisson", "gaussian"),
+    ("model", "readout"): ("poisson", "negative_binomial", "gaussian"),
     ("drift", "use"): ("choose", "on", "off"),
 }
 _RANGES = {
@@ -38,6 +38,7 @@ class SimulateSettings:
     extra_s: tuple[float, ...] = (0.0, 0.15, 0.3)
     account: str = "interval=sustained,context=initial,trial=initial"
     mean_rate_hz: float = 12.0
+    dispersion: float = 1.0
 
 
 @dataclass(frozen=True)

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from portfire.dynamics import Setup
+from portfire.dynamics import READOUTS, Setup
 from portfire.estimation._freedom import Freedom
 from portfire.estimation._stretch import n_stretches, pull_through, stretch, stretch_map
 from portfire.inference import Moments, Packed, Path
@@ -181,6 +181,7 @@ def make_scaling(
     units = np.zeros((setup.n_units, k_unit, k_unit))
     steps = np.zeros((k_step, k_step))
     rows_gram = np.zeros((len(prompt), len(prompt)))
+    readout, own_information = READOUTS[setup.model.readout], dict[str, np.ndarray]()
     for chunk, (mode, moments) in zip(packed.chunks, posteriors, strict=True):
         # Lanes are sorted by length, then by session time: every so many of them cover both.
         x, cov = np.asarray(mode.x)[..., ::stride], np.asarray(moments.covariance)[..., ::stride]
@@ -194,10 +195,9 @@ def make_scaling(
         )
         eta = features[:, :d] @ centre["readout"].T + centre["log_rate"]
         eta = eta + features[:, d + 1 :] @ centre["drift"][:, : k_unit - d - 1].T
-        if setup.model.readout == "gaussian":
-            weight = np.broadcast_to(np.exp(-centre["log_variance"]), eta.shape)
-        else:
-            weight = setup.bin_s * np.exp(eta)
+        weight, own = readout.information(centre, eta, setup.bin_s)
+        for name, seen in own.items():
+            own_information[name] = own_information.get(name, 0.0) + seen / share
         outer = (features[:, :, None] * features[:, None, :]).reshape(len(features), -1)
         outer = outer.reshape(-1, k_unit, k_unit)
         outer[:, :d, :d] += spread
@@ -230,8 +230,7 @@ def make_scaling(
     scalars: dict[str, np.ndarray] = {}
     if "log_run_up_noise" in centre:
         scalars["log_run_up_noise"] = np.array(np.sqrt(2.0 / (n_trials * before * d)))
-    if "log_variance" in centre:
-        scalars["log_variance"] = np.full(setup.n_units, np.sqrt(2.0 / max(trials_bins(packed), 1)))
+    scalars |= {name: 1.0 / np.sqrt(seen) for name, seen in own_information.items()}
     lasting_size = np.sqrt(setup.n_reference * noise / (2 * n_trials))
     return Scaling(
         centre=centre,
@@ -245,8 +244,3 @@ def make_scaling(
         scalars=scalars,
         stretches=np.zeros((n_stretches(d), 0)),
     )
-
-
-def trials_bins(packed: Packed) -> float:
-    """Observed bins of all trials."""
-    return float(sum(float(np.sum(chunk.mask)) for chunk in packed.chunks))

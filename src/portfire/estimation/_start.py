@@ -6,7 +6,7 @@ import numpy as np
 from scipy.ndimage import gaussian_filter1d
 
 from portfire.accounts import make_design
-from portfire.dynamics import Setup, parameter_shapes
+from portfire.dynamics import READOUTS, Setup, parameter_shapes
 from portfire.session import Trials
 
 SMOOTHING_S = 0.05
@@ -121,6 +121,6 @@ def start_values(trials: Trials, setup: Setup) -> dict[str, np.ndarray]:
         "sustained_factor": np.sqrt(0.3 * setup.n_reference * noise) * np.eye(d),
         "noise": np.array(noise),
         "log_run_up_noise": np.array(np.log(noise)),
-        "log_variance": np.log(np.var(np.sqrt(trials.counts)[trials.mask], axis=0) + 1e-3),
+        **READOUTS[setup.model.readout].start(trials.counts[trials.mask].astype(float)),
     }
     return {name: np.asarray(values[name], dtype=float) for name in parameter_shapes(setup)}

@@ -79,6 +79,7 @@ def importance(
     eta = log_rates(params, offset, posterior.mode.x)
     single = jnp.float32
     eta_low, mask = eta.astype(single), chunk.mask.astype(single)
+    counts_low = chunk.counts.astype(single)
     c = params["readout"].astype(single)
     low = {name: value.astype(single) for name, value in params.items()}
 
@@ -91,9 +92,9 @@ def importance(
         flat = x[:, :, 0].transpose(1, 0, 2).reshape(d, -1).astype(single)
         change = (c @ flat).reshape(-1, n_time, n_lanes)
         logs = [
-            jnp.sum(readout.remainder(low, eta_low, sign * change, setup.bin_s) * mask, axis=(0, 1)).astype(
-                jnp.float64
-            )
+            jnp.sum(
+                readout.remainder(low, counts_low, eta_low, sign * change, setup.bin_s) * mask, axis=(0, 1)
+            ).astype(jnp.float64)
             + sign * tilt
             for sign in (1.0, -1.0)
         ]

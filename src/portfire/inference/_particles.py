@@ -199,7 +199,8 @@ def particle_posterior(
         # One more than the states need, for resampling: a second call adds a quarter to the compile time.
         return jax.random.normal(key, (d * n_pairs + 1,))
 
-    inputs = (jnp.arange(n_time), conditionals, centre.x, eta, chunk.mask)
+    counts = chunk.counts.astype(single).transpose(1, 0, 2)
+    inputs = (jnp.arange(n_time), conditionals, centre.x, eta, counts, chunk.mask)
 
     def one_run(_: None, run: jax.Array) -> tuple[None, tuple[jax.Array, ...]]:
         seeds = jax.vmap(lambda key: jax.random.fold_in(key, run))(keys)
@@ -218,7 +219,7 @@ def particle_posterior(
             )
 
         def step(cloud: _Cloud, entry: tuple) -> tuple[_Cloud, None]:
-            time, law, middle, at_mode, seen = entry
+            time, law, middle, at_mode, counted, seen = entry
             drawn = jax.vmap(lambda key: draw(jax.random.fold_in(key, time)), out_axes=-1)(seeds)
             start = jax.scipy.special.ndtr(drawn[-1])
             poor = _effective_share(cloud.log_weights) < _RESAMPLE_BELOW
@@ -230,7 +231,7 @@ def particle_posterior(
             e = cloud.e + multiply(law.gain, innovation)
             change = c @ (x + middle[:, None]).reshape(d, -1).astype(single)
             change = change.reshape(-1, n_particles, n_lanes)
-            beyond = readout.remainder(low, at_mode[:, None], change, setup.bin_s)
+            beyond = readout.remainder(low, counted[:, None], at_mode[:, None], change, setup.bin_s)
             log_weights = cloud.log_weights + jnp.sum(beyond, axis=0).astype(jnp.float64) * seen
             effective = jnp.minimum(cloud.effective, _effective_share(log_weights))
             return _Cloud(x, e, log_weights, cloud.log_sum, effective), None

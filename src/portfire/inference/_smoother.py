@@ -15,7 +15,7 @@ import jax.numpy as jnp
 import numpy as np
 from jax import lax
 
-from portfire.dynamics import READOUTS, Params, PathPrior, Setup, path_inputs, path_prior
+from portfire.dynamics import READOUTS, Params, PathPrior, Setup, own_gradient, path_inputs, path_prior
 from portfire.inference._chain import (
     Factor,
     apply_over_time,
@@ -526,11 +526,8 @@ def laplace_gradient(
     by_trial = by_eta.reshape(n, n_time, n_lanes).sum(axis=1)
     gradient["log_rate"] = by_trial.sum(axis=1)
     gradient["drift"] = by_trial @ chunk.drift.T
-    if setup.model.readout == "gaussian":
-        precision = jnp.exp(-params["log_variance"])
-        error = ((chunk.counts - eta) ** 2).reshape(n, -1) * used.reshape(-1)
-        seen = jnp.sum(used)
-        bend = jnp.sum(spread * used.reshape(-1), axis=1)
-        gradient["log_variance"] = 0.5 * (precision * (jnp.sum(error, axis=1) + bend) - seen)
+    around, moved = spread.reshape(eta.shape), (c @ flat_turn).reshape(eta.shape)
+    own = own_gradient(READOUTS[setup.model.readout], params, chunk.counts, eta, around, moved, setup.bin_s)
+    gradient |= {name: jnp.sum(by * used, axis=(1, 2)) for name, by in own.items()}
     short = jnp.sum(lean.x * posterior.slack.x, axis=(0, 1)) + jnp.sum(lean.e * posterior.slack.e, axis=0)
     return gradient, moments, short

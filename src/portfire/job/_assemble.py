@@ -12,7 +12,7 @@ from scipy.special import gammaln
 
 from portfire.accounts import Account
 from portfire.comparison import choose_smallest, fold_of, training_rows
-from portfire.dynamics import ModelFile
+from portfire.dynamics import READOUTS, ModelFile
 from portfire.job._atomic import write_dataset_atomic, write_json_atomic, write_table_atomic
 from portfire.job._evidence import Evidences
 from portfire.job._findings import Findings
@@ -65,7 +65,7 @@ def write_outputs(
         },
         "behaviour": behaviour,
         "chosen": _chosen(findings),
-        "accounts": _account_rows(findings, evidence, others, models[0].readout == "poisson"),
+        "accounts": _account_rows(findings, evidence, others, READOUTS[models[0].readout].of_counts),
         "contrasts": list(evidence.rows),
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),

@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 
 from portfire.accounts import Account
-from portfire.dynamics import ModelFile, read_model
+from portfire.dynamics import READOUTS, ModelFile, read_model
 from portfire.errors import InputError
 from portfire.job._assemble import write_outputs
 from portfire.job._evidence import collect_contrasts
@@ -81,11 +81,11 @@ def _run_session(job: Job, workspace: Workspace) -> None:
 def _refuse_mixed_readouts(job: Job, models: Sequence[ModelFile]) -> None:
     """Models are compared by the likelihood of the same data: counts, or square roots of counts."""
     readouts = {model.readout: model.name for model in models}
-    if len(readouts) > 1:
+    if len({READOUTS[readout].of_counts for readout in readouts}) > 1:
         named = " and ".join(f"{name!r} has {readout}" for readout, name in sorted(readouts.items()))
         raise InputError(
             f"{job.source or job.sessions[0]}: [model] file: the likelihoods of different readouts cannot be "
-            f"compared, but {named}; give models with one readout"
+            f"compared, but {named}; give models whose readouts are all of counts, or all of square roots"
         )
 
 

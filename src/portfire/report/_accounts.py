@@ -36,7 +36,6 @@ from portfire.report._words import (
     write_interval,
     write_number,
     write_p_value,
-    write_short,
 )
 
 ENTRY_LOOKS = {
@@ -247,7 +246,7 @@ def tabulate_contrasts(run: RunFolder) -> list[list[str]]:
                 continue
             route = name.removesuffix("_unique")
             ratio = (contrast.get("lr") or {}).get(route) or (contrast.get("lr") or {}).get(name) or {}
-            statistic = f"{write_short(ratio.get('stat'))} ({ratio.get('df')} df)" if ratio else "not given"
+            statistic = f"{write_number(ratio.get('stat'))} ({ratio.get('df')} df)" if ratio else "not given"
             rows.append(
                 [name_source(contrast), words, write_number(entry.get("nats_per_trial"), 3),
                  write_interval(entry.get("ci95"), 3), statistic, write_p_value(entry.get("p"))]

@@ -29,6 +29,8 @@ from portfire.report._style import (
 )
 from portfire.report._words import begin_sentence, join_words, write_number, write_short
 
+# Below this R² a prediction is worse than useless, and one such mark would flatten all the others.
+LOWEST = -1.0
 Placed = tuple[Mapping[str, Any], float]
 KEY, TITLE = "decode", "R² within condition against the cutoff"
 FEATURE_LOOKS = {
@@ -113,6 +115,11 @@ def _describe_figure(
         f" A filled mark has a one-sided p at or below {run.level:g}, not adjusted for the number of marks. "
         "Only spikes up to the cutoff are used."
     )
+    if any(r[key] < LOWEST for r in rows for key in ("r2_within_condition", "r2_window") if r.get(key)):
+        caption += (
+            f" Marks that lie below {write_number(LOWEST, 0)} stand at the lower edge with their value, and "
+            "lines and bars end there."
+        )
     if _late_is_all(run.rows("decode")):
         caption += (
             " At every cutoff all of these trials respond 0.15 s or more after it, so the variant for late "
@@ -182,9 +189,14 @@ def _draw_tests(
 def _draw_mark(axes: Axes, x: float, y: float, row: Mapping[str, Any], level: float, n_marks: int) -> None:
     look = FEATURE_LOOKS[row["features"]]
     passed = row.get("p") is not None and row["p"] <= level
+    if y < LOWEST:
+        axes.annotate(
+            write_number(y, 1), (x, LOWEST), (0, 7), textcoords="offset points", ha="center", fontsize=7.5
+        )
     axes.plot(
-        [x], [y], color=look.colour, marker=look.marker, markersize=float(np.clip(260 / n_marks, 4, 7.5)),
-        markerfacecolor=look.colour if passed else "white", markeredgewidth=1.4, zorder=3,
+        [x], [max(y, LOWEST)], color=look.colour, marker=look.marker,
+        markersize=float(np.clip(260 / n_marks, 4, 7.5)), markerfacecolor=look.colour if passed else "white",
+        markeredgewidth=1.4, zorder=3,
     )  # fmt: skip
 
 
@@ -194,6 +206,10 @@ def _finish(axes: Axes, cutoffs: list[float]) -> None:
     axes.set_xlim(-0.5, len(cutoffs) - 0.5)
     axes.yaxis.set_major_locator(MaxNLocator(4))
     axes.margins(y=0.1)
+    if axes.get_ylim()[0] < LOWEST:
+        top = max(axes.dataLim.y1, 0.0)
+        margin = 0.1 * (top - LOWEST)
+        axes.set_ylim(LOWEST - margin, top + margin)
     for edge in np.arange(len(cutoffs) - 1) + 0.5:
         axes.axvline(edge, color=FAINT, linewidth=0.7, zorder=0)
 

@@ -19,10 +19,21 @@ def state_decode(run: RunFolder, features: str = "state") -> list[str]:
     passed = [r for r in chosen if r.get("p") is not None and r["p"] <= run.level]
     best = max(passed or chosen, key=lambda r: _or_low(r.get("r2_within_condition")))
     if not passed:
+        counts = [r for r in rows if r.get("features") == "counts" and features != "counts"]
+        foretold = [r for r in counts if r.get("p") is not None and r["p"] <= run.level]
+        also = []
+        if foretold:
+            cutoffs = join_words([f"{write_short(r['cutoff_s'])}{GAP}s" for r in foretold])
+            values = join_words([write_number(r.get("r2_within_condition")) for r in foretold])
+            also = [
+                "The yardstick, one raw count a unit over the same window, does predict it, with spikes up "
+                f"to {cutoffs} (R² {values}): the fitted state leaves out what foretells the interval."
+            ]
         return [
             "The single-trial state does not predict the produced interval within a condition better than "
             f"its null at any cutoff (p above {write_short(run.level)}).",
             f"The largest: {describe_row(best)} A p above the level is no evidence of absence.",
+            *also,
         ]
     cutoffs = join_words([f"{write_short(r['cutoff_s'])}{GAP}s" for r in passed])
     counts = [r for r in rows if r.get("features") == "counts" and r.get("cutoff_s") == best.get("cutoff_s")]

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from importlib.resources import files
+from pathlib import Path
 from typing import Any
 
 from jinja2 import Environment, StrictUndefined
@@ -64,6 +65,11 @@ def _title(run: RunFolder) -> str:
     return run.path.resolve().name or "run"
 
 
+def _name_session(run: RunFolder) -> str | None:
+    path = run.part("settings").get("session")
+    return Path(path).name if isinstance(path, str) else None
+
+
 def _as_dict(figure: Drawn | Absent) -> dict[str, Any]:
     if isinstance(figure, Drawn):
         return {"title": figure.title, "svg": figure.svg, "caption": figure.caption, "absent": None}
@@ -73,6 +79,7 @@ def _as_dict(figure: Drawn | Absent) -> dict[str, Any]:
 def _list_facts(run: RunFolder) -> list[tuple[str, str]]:
     session, chosen = run.part("session"), run.part("chosen")
     facts = [
+        ("session", _name_session(run)),
         ("trials used", _count_used(session, "trials")),
         ("units used", _count_used(session, "units")),
         ("conditions", session.get("conditions")),

@@ -23,7 +23,7 @@ from portfire.report._style import (
     make_figure,
     write_svg,
 )
-from portfire.report._words import count_words, write_number
+from portfire.report._words import GAP, count_words, write_number
 
 MAX_MARKS = 25
 CLOSE = 1.1  # squared differences over counting noise
@@ -40,6 +40,8 @@ class RateCheck:
     excess : float or None
         Mean squared difference over the counting noise that Poisson counts at the model's rate would give;
         1 is what a model that is right would show. None without `n_running`.
+    spread : float
+        Standard deviation of `excess` that counting noise alone gives.
     by_unit : array (unit,)
         The same for each unit (mean squared difference over its mean rate without `n_running`).
     by_time : array (time,)
@@ -53,6 +55,7 @@ class RateCheck:
 
     share: float
     excess: float | None
+    spread: float
     by_unit: np.ndarray
     by_time: np.ndarray
     spread_by_unit: np.ndarray | None
@@ -91,6 +94,7 @@ def check_rates(rates: xr.Dataset) -> RateCheck | None:
     return RateCheck(
         share=share,
         excess=None if bin_s is None else float(ratio.sum() / finite.sum()),
+        spread=float(np.sqrt(parts[1].sum()) / finite.sum()),
         by_unit=np.nan_to_num(by_unit),
         by_time=by_time,
         spread_by_unit=None if bin_s is None else spread_by_unit,
@@ -125,14 +129,14 @@ def state_rates(run: RunFolder) -> list[str]:
     if check is None:
         return ["Recorded and model rates were not compared: there are no rates to compare."]
     share = (
-        f"Over conditions and time the model's rates account for {write_number(100 * check.share, 1)} % of "
-        "the variance of the recorded ones about each unit's mean"
+        f"Over conditions and time the model's rates account for {write_number(100 * check.share, 1)}{GAP}% "
+        "of the variance of the recorded ones about each unit's mean"
     )
     if check.excess is None:
         sentences = [f"{share}."]
     else:
         times = f"{write_number(check.excess)} times what Poisson counting noise alone would give"
-        if check.excess < CLOSE:
+        if check.excess < max(CLOSE, 1 + 2 * check.spread):
             sentences = [
                 "The model's rates are as close to the recorded ones as counting allows: squared differences "
                 f"are {times}.",
@@ -145,13 +149,14 @@ def state_rates(run: RunFolder) -> list[str]:
                 f"{share}.",
             ]
     assert run.rates is not None
-    if "pc_variance" in run.rates:
+    # As many components as units hold all of the variance, whatever was recorded.
+    if "pc_variance" in run.rates and run.rates.sizes["unit"] > run.rates.sizes["component"]:
         shares = run.rates["pc_variance"].values
         held = float(np.nansum(shares[:10]))
         n = min(10, len(shares))
         sentences.append(
             f"The first {count_words(n, 'principal component')} of the trial-averaged recorded rates "
-            f"{'holds' if n == 1 else 'hold'} {write_number(100 * held, 1)} % of their variance."
+            f"{'holds' if n == 1 else 'hold'} {write_number(100 * held, 1)}{GAP}% of their variance."
         )
     return sentences
 

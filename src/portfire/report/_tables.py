@@ -55,7 +55,7 @@ def list_accounts(run: RunFolder) -> Table | None:
                 str(entry.get("model")),
                 str(entry.get("latent_dim")),
                 write_number(entry.get("loglik_per_trial")),
-                write_short(entry.get("loglik_se"), 2),
+                _write_error(entry.get("loglik_se")),
                 difference,
                 write_number(entry.get("bits_per_spike"), 3),
                 str(entry.get("n_trials")),
@@ -76,6 +76,10 @@ def list_accounts(run: RunFolder) -> Table | None:
         rows,
         n_words=2,
     )  # fmt: skip
+
+
+def _write_error(value: Any) -> str:
+    return "< 0.001" if value is not None and abs(float(value)) < 0.001 else write_number(value, 3)
 
 
 def list_contrasts(run: RunFolder) -> Table | None:

@@ -267,11 +267,11 @@ def state_by_fold(run: RunFolder) -> str | None:
     whole = tuple(run.part("chosen").get(key) for key in keys)
     if set(chosen) == {whole}:
         return f"Inside each of the {len(chosen)} training sets the choice is the same."
-    same = [str(fold) for fold, size in enumerate(chosen, start=1) if size == whole]
-    parts = [f"without fold {join_words(same, 'or')} it is the same"] if same else []
-    parts += [
-        f"without fold {fold} it is {model} with {dim} latent dimensions{'' if drift else ', no drift'}"
-        for fold, (model, dim, drift) in enumerate(chosen, start=1)
-        if (model, dim, drift) != whole
-    ]
+    parts = []
+    # The choice on all trials first, then as the folds come.
+    for size in sorted(dict.fromkeys(chosen), key=lambda size: size != whole):
+        model, dim, drift = size
+        folds = join_words([str(fold) for fold, found in enumerate(chosen, start=1) if found == size], "or")
+        what = f"{model} with {count_words(int(dim or 0), 'latent dimension')}{'' if drift else ', no drift'}"
+        parts.append(f"without fold {folds} it is {'the same' if size == whole else what}")
     return f"The choice inside the training sets: {'; '.join(parts)}."

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
+from portfire.dynamics import READOUTS
 from portfire.errors import PortfireError
 from portfire.estimation import kind_of
 from portfire.simulate._system import Boundary, System, carry, path_inputs
@@ -224,7 +225,7 @@ def _draw_spikes(
             f"the dynamics run away: unit {busiest!r} would fire {rate.max():.3g} spikes/s in trial {trial}; "
             "draw from another model or fit."
         )
-    counts = rng.poisson(setup.bin_s * rate)
+    counts = READOUTS[setup.model.readout].draw(params, setup.bin_s * rate, rng)
     start = set_s[row] + time[column] * setup.bin_s
     out = {}
     for place, label in enumerate(system.units):

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from portfire.accounts import Account
+from portfire.dynamics import READOUTS
 from portfire.errors import InputError
 from portfire.estimation import kind_of
 from portfire.simulate._system import Condition, ResponseHazard, System, design_rows
@@ -40,10 +41,10 @@ def system_of_fit(
         If the fit has no response hazard or no spikes to draw, or lacks a route of the account.
     """
     setup, params = fitted.setup, dict(fitted.params)
-    if setup.model.readout != "poisson":
+    if not READOUTS[setup.model.readout].of_counts:
         raise InputError(
             f"the fit has a {setup.model.readout} readout, from which no spikes can be drawn; fit a model "
-            "with readout = 'poisson'."
+            "with readout = 'poisson' or 'negative_binomial'."
         )
     if fitted.hazard is None:
         raise InputError(
@@ -59,7 +60,7 @@ def system_of_fit(
     params = kind_of(setup).project(params, setup, wanted)
     params.setdefault("log_run_up_noise", np.log(_RUN_UP_SHARE * params["noise"]))
     places, units = _choose_units(fitted.session["units"], n_units, seed)
-    for name in ("readout", "log_rate", "drift"):
+    for name in ("readout", "log_rate", "drift", *READOUTS[setup.model.readout].own):
         params[name] = params[name][places]
     pairs = fitted.session["conditions"]
     conditions = tuple(Condition(context, None if s is None else float(s)) for context, s in pairs)

@@ -120,6 +120,8 @@ def make_system(scenario: Scenario, seed: int) -> System:
         "noise": np.array(NOISE),
         "log_run_up_noise": np.array(np.log(_RUN_UP_SHARE * NOISE)),
     }
+    if model.readout == "negative_binomial":
+        params["log_dispersion"] = np.full(setup.n_units, np.log(scenario.dispersion))
     return System(
         setup=setup,
         account=account,

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 from portfire.accounts import Account
-from portfire.dynamics import ModelFile, read_model
+from portfire.dynamics import READOUTS, ModelFile, read_model
 from portfire.errors import InputError
 
 
@@ -34,6 +34,9 @@ class Scenario:
         Mean over units of the mean rate (spikes/s); rates are log-normal.
     rate_spread : float, default 0.6
         SD of the log rate over units.
+    dispersion : float, default 1.0
+        Of every unit's counts in bins of the dynamics' step, where the model's readout is negative binomial:
+        their variance is mean + mean² / dispersion.
     ramp : float, default 0.8
         SD over units of the change of log rate while the timer runs from its start to the boundary.
     side_gain : float, default 0.4
@@ -67,6 +70,7 @@ class Scenario:
     extra_s: tuple[float, ...] = (0.0, 0.15, 0.3)
     mean_rate_hz: float = 12.0
     rate_spread: float = 0.6
+    dispersion: float = 1.0
     ramp: float = 0.8
     side_gain: float = 0.4
     cv: float = 0.11
@@ -104,10 +108,10 @@ def scenario_of_model(
     """
     asked = model.simulate
     where = f"model {model.name!r}, [simulate]"
-    if model.readout != "poisson":
+    if not READOUTS[model.readout].of_counts:
         raise InputError(
             f"model {model.name!r}: readout = {model.readout!r} has no spikes to draw; simulate from a model "
-            "with readout = 'poisson'."
+            "with readout = 'poisson' or 'negative_binomial'."
         )
     if len(asked.contexts) != len(asked.extra_s):
         raise InputError(
@@ -139,6 +143,7 @@ def scenario_of_model(
         contexts=asked.contexts,
         extra_s=asked.extra_s,
         mean_rate_hz=asked.mean_rate_hz,
+        dispersion=asked.dispersion,
         drift_sd=0.0 if model.drift == "off" else Scenario.drift_sd,
     )
 

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from portfire.dynamics import Setup, parameter_shapes
+from portfire.dynamics import READOUTS, Setup, parameter_shapes
 from portfire.estimation import kind_of
 from portfire.session import Trials
 from portfire.simulate._draw import Drawn
@@ -49,7 +49,7 @@ def true_parameters(drawn: Drawn, setup: Setup, trials: Trials) -> dict[str, np.
     place = {unit: n for n, unit in enumerate(system.units)}
     units = [place[unit] for unit in trials.unit]
     values = dict(system.params)
-    for name in ("readout", "log_rate", "drift"):
+    for name in ("readout", "log_rate", "drift", *READOUTS[setup.model.readout].own):
         values[name] = values[name][units]
     if setup.n_drift == 0:
         values["drift"] = np.zeros((len(units), 0))
