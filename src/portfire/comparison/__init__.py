@@ -12,6 +12,15 @@ from ._contrast import Contrast, Entry, Scored, contrast_sources
 from ._folds import block_of, block_size, count_fewest, fold_of, inner_sets, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
 from ._ladder import Ladder, climb, contrast_accounts
+from ._persistence import (
+    PERSISTENCE_GRID_S,
+    Persistence,
+    Profile,
+    find_persistence,
+    mean_delay,
+    profile_persistence,
+    summarise_profile,
+)
 from ._size import Choice, Deficit, choose_smallest
 from ._verdict import (
     Evidence,
@@ -34,6 +43,13 @@ __all__ = [
     "carrying_time_constant",
     "choose_smallest",
     "climb",
+    "PERSISTENCE_GRID_S",
+    "Persistence",
+    "Profile",
+    "find_persistence",
+    "mean_delay",
+    "profile_persistence",
+    "summarise_profile",
     "contrast_accounts",
     "contrast_sources",
     "block_of",

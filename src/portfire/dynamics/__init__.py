@@ -13,6 +13,7 @@ from portfire.dynamics._models import find_model, shipped_models
 from portfire.dynamics._readouts import READOUTS, Curvature, Readout
 from portfire.dynamics._setup import Setup, make_setup, n_drift_functions
 from portfire.dynamics._spec import ModelFile, SimulateSettings, model_from_dict, model_to_dict, read_model
+from portfire.dynamics._spread import decay_of, spread_kernels
 
 __all__ = [
     "READOUTS",
@@ -24,6 +25,7 @@ __all__ = [
     "Setup",
     "SimulateSettings",
     "accumulated_noise",
+    "decay_of",
     "find_model",
     "initial_covariance",
     "make_setup",
@@ -34,5 +36,6 @@ __all__ = [
     "path_inputs",
     "path_prior",
     "read_model",
+    "spread_kernels",
     "shipped_models",
 ]

@@ -6,6 +6,7 @@ import numpy as np
 from scipy.special import expit
 
 from portfire.accounts import make_design
+from portfire.dynamics import spread_kernels
 from portfire.estimation._fit import Fit
 from portfire.session import Trials
 
@@ -22,7 +23,8 @@ def draw_paths(fitted: Fit, rows: np.ndarray, n_time: int, rng: np.random.Genera
     """
     setup, p = fitted.setup, fitted.params
     d, noise = setup.latent_dim, float(p["noise"])
-    kernels, border = setup.kernels(n_time), setup.border_kernel(n_time)
+    spread = spread_kernels(p, setup, n_time)
+    kernels, border = spread[:-1], spread[-1]
     cov = np.zeros((d, d))
     for _ in range(setup.initial_bins):
         cov = p["transition"] @ cov @ p["transition"].T + noise * np.eye(d)

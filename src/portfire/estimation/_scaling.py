@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg import solve_triangular
 
-from portfire.dynamics import Setup
+from portfire.dynamics import Setup, spread_kernels
 from portfire.estimation._freedom import Freedom
 from portfire.inference import Moments, Packed, Path
 
@@ -183,7 +183,7 @@ def make_scaling(
         outer[:, :d, :d] += spread
         units += (weight.T @ outer.reshape(len(features), -1)).reshape(units.shape)
         n_after = n_time - before
-        kernels, cue = setup.kernels(n_after), setup.cue_basis(n_after)
+        kernels, cue = spread_kernels(centre, setup, n_after), setup.cue_basis(n_after)
         step, lane = np.nonzero(mask[before + 1 :] * mask[before:-1])
         pushes = rows[lasting][:, lane] * kernels[lasting][:, step + 1]
         z = np.concatenate(
