@@ -5,6 +5,7 @@ from portfire.inference._chain import Factor, factorise, invert_band, substitute
 from portfire.inference._chunk import Chunk, Packed, pack
 from portfire.inference._importance import Sampled, correction_size, draw_deviations, importance, lane_keys
 from portfire.inference._particles import Filtered, filter_particles, particle_posterior, refine
+from portfire.inference._scores import laplace_scores
 from portfire.inference._smoother import (
     Moments,
     Path,
@@ -36,6 +37,7 @@ __all__ = [
     "lane_keys",
     "laplace",
     "laplace_gradient",
+    "laplace_scores",
     "newton_sweep",
     "pack",
     "particle_posterior",
