@@ -1,5 +1,6 @@
 """Folds, gains, p values and verdicts: what the held-out scores say about the accounts."""
 
+from ._bootstrap import Bootstrap, DrawnP, bootstrap_score, bound_covariances, sequential_p
 from ._boundary import (
     cone_weights,
     count_parameters,
@@ -8,6 +9,7 @@ from ._boundary import (
     mixture_weights,
 )
 from ._carry import carrying_time_constant
+from ._cone import score_statistic
 from ._contrast import Contrast, Entry, Scored, contrast_sources
 from ._folds import block_of, block_size, count_fewest, fold_of, inner_sets, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
@@ -20,6 +22,16 @@ from ._persistence import (
     mean_delay,
     profile_persistence,
     summarise_profile,
+)
+from ._robust import (
+    ASSIGNMENTS,
+    deal_labels,
+    push_scores,
+    randomisation_p,
+    randomise_source,
+    robust_p,
+    sign_flip_p,
+    sum_blocks,
 )
 from ._size import Choice, Deficit, choose_smallest
 from ._verdict import (
@@ -34,6 +46,20 @@ from ._verdict import (
 )
 
 __all__ = [
+    "ASSIGNMENTS",
+    "Bootstrap",
+    "DrawnP",
+    "bootstrap_score",
+    "bound_covariances",
+    "deal_labels",
+    "push_scores",
+    "randomisation_p",
+    "randomise_source",
+    "robust_p",
+    "score_statistic",
+    "sequential_p",
+    "sign_flip_p",
+    "sum_blocks",
     "Choice",
     "Contrast",
     "Deficit",

@@ -60,7 +60,9 @@ def laplace_scores(params: Params, setup: Setup, chunk: Chunk, posterior: Poster
     bent = -0.5 * slope * spread
     pull = (c.T @ bent.reshape(n, -1)).reshape(d, n_time, n_lanes).transpose(1, 0, 2)
     turn = substitute_backward(posterior.factor, substitute_forward(posterior.factor, pull[:, :, None]))
-    lean = _combine(blocks, posterior.border_solution, posterior.corner, turn[:, :, 0], jnp.zeros((d, n_lanes)))
+    lean = _combine(
+        blocks, posterior.border_solution, posterior.corner, turn[:, :, 0], jnp.zeros((d, n_lanes))
+    )
     flat_turn = lean.x.transpose(1, 0, 2).reshape(d, -1)
     by_eta = score + bent - weight * (c @ flat_turn).reshape(eta.shape)
     moving = {name: value for name, value in params.items() if name not in _OF_READOUT}
