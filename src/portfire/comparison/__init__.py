@@ -11,6 +11,7 @@ from ._boundary import (
 from ._carry import carrying_time_constant
 from ._cone import score_statistic
 from ._contrast import Contrast, Entry, Scored, contrast_sources
+from ._course import Course, cut_time, find_course
 from ._folds import block_of, block_size, count_fewest, fold_of, inner_sets, training_rows
 from ._gain import Gain, ResampledT, corrected_resampled_t, gain, holm, paired_difference
 from ._ladder import Ladder, climb, contrast_accounts
@@ -46,6 +47,9 @@ from ._verdict import (
 )
 
 __all__ = [
+    "Course",
+    "cut_time",
+    "find_course",
     "ASSIGNMENTS",
     "Bootstrap",
     "DrawnP",

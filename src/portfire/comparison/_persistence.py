@@ -42,6 +42,8 @@ class Profile:
         Parameters by which both have more than one push.
     bin_s, n_reference : float, int
         Bin width (s), and bins over which a kernel sums to one.
+    best : Fit or None
+        The highest of the fits with one push.
     """
 
     source: str
@@ -51,6 +53,7 @@ class Profile:
     n_extra: int
     bin_s: float
     n_reference: int
+    best: Fit | None = None
 
     @property
     def behind_both(self) -> float:
@@ -215,19 +218,26 @@ def profile_persistence(
     first, last = ends["initial"], ends["sustained"]
     setup = first.setup
     lasting = last.account
+    tops: list[Fit] = [first, *[first] * (len(grid_s) - 2), last]
     values = np.full(len(grid_s), -np.inf)
     values[0], values[-1] = first.value, last.value
+
+    def keep(k: int, found: Fit) -> Fit:
+        if found.value > values[k]:
+            values[k], tops[k] = found.value, found
+        return found
+
     start = replace(first, params=_lasting_from_prompt(first, source))
     for k, h in enumerate(grid_s[1:], start=1):
-        start = refit(lasting, replace(start, params={**start.params, "decay": _decays(setup, source, h)}))
-        values[k] = max(values[k], start.value)
+        decay = _decays(setup, source, h)
+        start = keep(k, refit(lasting, replace(start, params={**start.params, "decay": decay})))
     start = last
     for k in range(len(grid_s) - 2, 0, -1):
         decay = _decays(setup, source, grid_s[k])
-        start = refit(lasting, replace(start, params={**start.params, "decay": decay}))
-        values[k] = max(values[k], start.value)
+        start = keep(k, refit(lasting, replace(start, params={**start.params, "decay": decay})))
     plain = {name: value for name, value in _prompt_from_lasting(start, source).items() if name != "decay"}
-    values[0] = max(values[0], refit(first.account, replace(start, params=plain)).value)
+    keep(0, refit(first.account, replace(start, params=plain)))
     both = max(ends["both"].value, float(values[0]), float(values[-1]))
     n_extra = count_route(ends["both"].account, source, 0.0, setup)
-    return Profile(source, tuple(grid_s), values, both, n_extra, setup.bin_s, setup.n_reference)
+    best = tops[int(np.argmax(values))]
+    return Profile(source, tuple(grid_s), values, both, n_extra, setup.bin_s, setup.n_reference, best)

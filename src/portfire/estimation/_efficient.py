@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from portfire.accounts import Account
 from portfire.dynamics import Setup
 from portfire.estimation._directions import Covariances, Directions
 from portfire.estimation._draws import draw_trials
@@ -117,6 +118,7 @@ def make_efficient(
     n_curvature: int = 400,
     n_pilot: int = 3,
     tolerance: float = 0.01,
+    free: Account | None = None,
 ) -> Efficient:
     """Measure the curvature that ties directions to the free parameters of a fit.
 
@@ -135,6 +137,8 @@ def make_efficient(
         Sessions drawn for the information.
     tolerance : float, default 0.01
         Share of a column's right-hand side that may be left.
+    free : Account, optional
+        What counts as estimated beside the directions; by default all that the fit's account frees.
     """
     setup = fitted.setup
     part = trials
@@ -143,7 +147,7 @@ def make_efficient(
     share = len(part) / len(trials)
     packed = pack(part, setup)
     objective = Objective(packed, setup)
-    freedom = free_parameters(fitted.account, setup, fitted.drift)
+    freedom = free_parameters(free or fitted.account, setup, fitted.drift)
     base = fitted.params
     objective(base)
     n_chunks = min(len(packed.chunks), 3)
