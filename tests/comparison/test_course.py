@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -64,7 +65,7 @@ def test_a_push_that_dies_away_is_drawn_so():
     kernel = decay[-2] ** np.arange(16) / np.sum(decay[-2] ** np.arange(N_REFERENCE))
     size = true_push(truth, "context", True) * kernel / BIN_S
     edges = np.round(found.edges_s / BIN_S).astype(int)
-    expected = np.array([size[a:b].mean() for a, b in zip(edges[:-1], edges[1:], strict=True)])
+    expected = np.array([size[a:b].mean() for a, b in pairwise(edges)])
     assert np.all(np.abs(np.abs(found.rate[0]) - expected) < 3.5 * found.rate_se[0])
     assert abs(found.rate[0, 0]) > 3 * abs(found.rate[0, -1])
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -110,7 +111,7 @@ def find_course(fitted: Fit, trials: Trials, source: str, seed: int = 0) -> Cour
     edges = cut_time(trials.n_bins, setup.bin_s, n_time)
     segments = np.zeros((len(edges), n_time))
     segments[0, 0] = 1.0
-    for k, (low, high) in enumerate(zip(edges[:-1], edges[1:], strict=True), start=1):
+    for k, (low, high) in enumerate(pairwise(edges), start=1):
         segments[k, low:high] = 1.0
     # What comes after the last segment goes on as there.
     segments[-1, edges[-1] :] = 1.0
@@ -143,7 +144,7 @@ def find_course(fitted: Fit, trials: Trials, source: str, seed: int = 0) -> Cour
             for pair in map(list, zip(prompt, lasting, strict=True))
         ]
     )
-    weight = np.linalg.qr(params["readout"])[1]
+    weight = np.asarray(np.linalg.qr(params["readout"])[1], dtype=float)
     penalty = _penalty(len(prompt), np.diff(edges) * setup.bin_s, weight.T @ weight)
     information = efficient.information
     pulled = information @ own.ravel() + efficient.score(trials)
