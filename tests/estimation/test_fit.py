@@ -167,14 +167,17 @@ def test_scores_are_about_trials_not_about_their_order(world, full):
 
 
 def test_a_covariance_is_opened_where_the_score_says_so():
-    """Started with no sustained push of the trial, the full account finds it: ends where a cold fit ends."""
+    """Started with no sustained push of the trial, the full account finds it.
+
+    It need not end at the very maximum of a cold fit: here there are two, 1.2 of 50 nats apart.
+    """
     trials, truth = draw_world("trial=sustained", seed=5)
     cold = fit_small(trials)
     closed = fit_small(trials, "interval=both,context=both,trial=initial", start=cold)
     assert not closed.params["sustained_factor"].any()
     assert cold.value - closed.value > 5
     opened = fit_small(trials, start=closed)
-    assert opened.value > cold.value - 0.5
+    assert opened.value - closed.value > 0.95 * (cold.value - closed.value)
     own = opened.params["sustained_factor"] @ opened.params["sustained_factor"].T
     moved = opened.params["readout"] @ own @ opened.params["readout"].T
     true_own = truth.params["sustained_factor"] @ truth.params["sustained_factor"].T

@@ -41,7 +41,7 @@ def test_a_poisson_regression_is_the_limit_without_a_latent_state() -> None:
     objective = Objective(packed, setup)
     none = np.array([], dtype=int)
     objective(start)
-    scaling = make_scaling(start, setup, Freedom(none, none, False, False, True), packed, objective.last, 1.0)
+    scaling = make_scaling(start, setup, Freedom(none, none, False, False, True), packed, objective.last)
     found = ascend(objective, scaling, 1e-12, 200)
     objective.close()
     assert not np.any(found.params["readout"])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -13,10 +13,15 @@ from portfire.estimation._objective import Objective, Values
 from portfire.estimation._optimise import ascend
 from portfire.estimation._scaling import Scaling, make_scaling
 from portfire.estimation._start import start_values
+from portfire.estimation._stretch import n_stretches
 from portfire.inference import Packed, Path, pack
 from portfire.session import Trials
 
 _PART_TRIALS = 64
+# Nats that four iterations must gain for an ascent to count as far off; after that the coordinates are made
+# anew, and the latent space may stretch.
+_NEAR = 5.0
+_STRETCH_STEP = 0.03
 
 
 @dataclass(frozen=True)
@@ -62,12 +67,9 @@ def _open_covariances(objective: Objective, params: Values, setup: Setup, freedo
 
 
 def _scale(objective: Objective, params: Values, setup: Setup, freedom: Freedom) -> Scaling:
-    """Scaled coordinates around ``params``, from the posteriors of the first chunks."""
+    """Scaled coordinates around ``params``, from the posteriors there."""
     objective(params)
-    packed = objective.packed
-    n_chunks = min(len(packed.chunks), 3)
-    share = sum(len(rows) for rows in packed.members[:n_chunks]) / packed.n_trials
-    return make_scaling(params, setup, freedom, packed, objective.last[:n_chunks], share)
+    return make_scaling(params, setup, freedom, objective.packed, objective.last)
 
 
 def _part(trials: Trials, n_trials: int) -> Trials:
@@ -75,6 +77,27 @@ def _part(trials: Trials, n_trials: int) -> Trials:
     if len(trials) <= n_trials:
         return trials
     return trials[np.round(np.linspace(0, len(trials) - 1, n_trials)).astype(int)]
+
+
+def _add_stretches(scaling: Scaling, part: Trials, whole: Objective) -> Scaling:
+    """The same scaling with stretches of the latent space, scaled by their curvature on a part."""
+    setup = whole.setup
+    size = n_stretches(setup.latent_dim)
+    free = replace(scaling, stretches=np.eye(size))
+    objective = Objective(pack(part, setup), setup)
+
+    def slope(position: int | None) -> np.ndarray:
+        flat = np.zeros(free.size)
+        if position is not None:
+            flat[free.size - size + position] = _STRETCH_STEP
+        return free.pull_back(objective(free.parameters(flat), free.frame(flat))[1], flat)[-size:]
+
+    base = slope(None)
+    curvature = np.array([base - slope(k) for k in range(size)]) / _STRETCH_STEP
+    objective.close()
+    values, vectors = np.linalg.eigh(0.5 * (curvature + curvature.T))
+    values = np.abs(values) * whole.packed.n_trials / len(part)
+    return replace(scaling, stretches=(vectors / np.sqrt(np.maximum(values, 1.0))) @ vectors.T)
 
 
 def find_maximum(
@@ -112,7 +135,14 @@ def find_maximum(
     packed = pack(trials, setup)
     objective = Objective(packed, setup)
     params = _open_covariances(objective, params, setup, freedom)
-    ascent = ascend(objective, _scale(objective, params, setup, freedom), tolerance, max_iterations)
+    scaling = _scale(objective, params, setup, freedom)
+    ascent = ascend(objective, scaling, max(tolerance, _NEAR), max_iterations)
+    trace = ascent.trace
+    if tolerance < _NEAR and len(trace) <= max_iterations:
+        scaling = _scale(objective, ascent.params, setup, freedom)
+        scaling = _add_stretches(scaling, _part(trials, _PART_TRIALS), objective)
+        ascent = ascend(objective, scaling, tolerance, max_iterations + 1 - len(trace))
+        trace = (*trace, *ascent.trace[1:])
     objective.close()
     status = "unconverged paths" if objective.n_unconverged else ascent.status
-    return Maximum(ascent.params, ascent.value, ascent.trace, status, packed, objective.paths)
+    return Maximum(ascent.params, ascent.value, trace, status, packed, objective.paths)

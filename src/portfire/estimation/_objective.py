@@ -42,15 +42,28 @@ class Objective:
     def __init__(self, packed: Packed, setup: Setup) -> None:
         self.packed, self.setup = packed, setup
         self.paths = [start_path(setup, chunk) for chunk in packed.chunks]
+        self.frame = np.eye(setup.latent_dim)
         self.last: list[tuple[Path, Moments]] = []
         self.n_calls = 0
         self.n_sweeps = 0
         self.n_unconverged = 0
         self._pool = ThreadPoolExecutor(n_threads())
 
-    def __call__(self, params: Values) -> tuple[float, Values]:
-        """Penalised log marginal likelihood (nats) and its gradient by every parameter."""
+    def __call__(self, params: Values, frame: np.ndarray | None = None) -> tuple[float, Values]:
+        """Penalised log marginal likelihood (nats) and its gradient by every parameter.
+
+        Parameters
+        ----------
+        params : dict of arrays
+        frame : array, shape (D, D), optional
+            Map by which the latent space was stretched; kept modes are carried from the last one's.
+        """
         device = to_device(params)
+        frame = np.eye(self.setup.latent_dim) if frame is None else frame
+        if np.any(frame != self.frame):
+            move = frame @ np.linalg.inv(self.frame)
+            self.paths = [Path(jnp.einsum("ij,tjb->tib", move, p.x), p.e) for p in self.paths]
+            self.frame = frame
 
         def one(task: tuple[Chunk, Path]) -> tuple[Posterior, tuple[dict, Moments, jax.Array]]:
             posterior = laplace(device, self.setup, *task)

@@ -69,7 +69,8 @@ def ascend(objective: Objective, scaling: Scaling, tolerance: float, max_iterati
     """
     params = scaling.centre
     value, gradient = objective(params)
-    flat, slope = np.zeros(scaling.size), -scaling.pull_back(gradient)
+    flat = np.zeros(scaling.size)
+    slope = -scaling.pull_back(gradient, flat)
     memory, trace, status = _Memory(), [value], "iterations"
     for _ in range(max_iterations):
         moved = _search(objective, scaling, flat, value, slope, -memory.solve(slope))
@@ -81,7 +82,7 @@ def ascend(objective: Objective, scaling: Scaling, tolerance: float, max_iterati
             status = "converged"
             break
         new_flat, value, params, gradient = moved
-        new_slope = -scaling.pull_back(gradient)
+        new_slope = -scaling.pull_back(gradient, new_flat)
         memory.add(new_flat - flat, new_slope - slope)
         flat, slope = new_flat, new_slope
         trace.append(value)
@@ -103,11 +104,11 @@ def _search(
     descent = float(slope @ direction)
     if not np.isfinite(descent) or descent >= 0:
         return None
-    length = 1.0
+    length = scaling.longest(direction)
     for _ in range(_MAX_HALVINGS):
         trial = flat + length * direction
         params = scaling.parameters(trial)
-        new_value, gradient = objective(params)
+        new_value, gradient = objective(params, scaling.frame(trial))
         finite = np.isfinite(new_value) and all(np.all(np.isfinite(part)) for part in gradient.values())
         if finite and new_value >= value - _ARMIJO * length * descent:
             return trial, new_value, params, gradient

@@ -10,17 +10,21 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import solve_triangular
 
 from portfire.dynamics import Setup, spread_kernels
 from portfire.estimation._freedom import Freedom
+from portfire.estimation._stretch import n_stretches, pull_through, stretch, stretch_map
 from portfire.inference import Moments, Packed, Path
 
+_SCALING_TRIALS = 192
+_MAX_STRETCH = 0.3
 
-def _factor(information: np.ndarray, floor: float) -> np.ndarray:
+
+def _unit_move(information: np.ndarray, floor: float) -> np.ndarray:
+    """L⁻ᵀ for the Cholesky factor L of an information matrix: its columns are moves of one unit."""
     size = len(information)
     information = information + (floor + 1e-9 * np.trace(information) / max(size, 1)) * np.eye(size)
-    return np.linalg.cholesky(information)
+    return np.linalg.inv(np.linalg.cholesky(information)).T
 
 
 @dataclass(frozen=True)
@@ -34,15 +38,17 @@ class Scaling:
     freedom : Freedom
         What may move.
     units : array, shape (unit, k, k)
-        Cholesky factors for readout row, log rate and drift of a unit.
+        Unit moves, as columns, of readout row, log rate and drift of a unit.
     steps : array, shape (k, k)
-        For a row of transition, offset, cue response and lasting pushes.
+        Of a row of transition, offset, cue response and lasting pushes.
     prompt_left, prompt_right : arrays
-        For the pushes at the set cue (state by column).
+        Of the pushes at the set cue (state by column).
     initial, sustained : arrays, shape (D, D)
         Size of a unit step of the trial-to-trial factors.
     scalars : dict of float or array
         For the parameters left.
+    stretches : array, shape (D(D+1)/2, D(D+1)/2 or 0)
+        Moves of the latent space as a whole, a column a coordinate; none while the ascent is far off.
     """
 
     centre: dict[str, np.ndarray]
@@ -54,6 +60,7 @@ class Scaling:
     initial: np.ndarray
     sustained: np.ndarray
     scalars: dict[str, np.ndarray]
+    stretches: np.ndarray
 
     def _sizes(self) -> list[tuple[str, tuple[int, ...]]]:
         d = len(self.prompt_left)
@@ -66,7 +73,8 @@ class Scaling:
             sizes.append(("initial", (d, d)))
         if self.freedom.sustained_factor:
             sizes.append(("sustained", (d, d)))
-        return sizes + [(name, self.centre[name].shape) for name in self.scalars]
+        sizes += [(name, self.centre[name].shape) for name in self.scalars]
+        return [*sizes, ("stretches", self.stretches.shape[1:])]
 
     @property
     def size(self) -> int:
@@ -86,29 +94,30 @@ class Scaling:
         out = {name: value.copy() for name, value in self.centre.items()}
         parts, free = self._split(flat), self.freedom
         d = len(self.prompt_left)
-        moved = np.linalg.solve(self.units.transpose(0, 2, 1), parts["units"][:, :, None])[:, :, 0]
+        moved = np.einsum("nij,nj->ni", self.units, parts["units"])
         out["readout"] += moved[:, :d]
         out["log_rate"] += moved[:, d]
         if free.drift:
             out["drift"] += moved[:, d + 1 :]
-        rows = solve_triangular(self.steps, parts["steps"].T, lower=True, trans="T").T
+        rows = parts["steps"] @ self.steps.T
         n_cue = out["cue"].shape[1]
         out["transition"] += rows[:, :d]
         out["offset"] += rows[:, d]
         out["cue"] += rows[:, d + 1 : d + 1 + n_cue]
         out["push"][:, free.lasting] += rows[:, d + 1 + n_cue :]
         if len(free.prompt):
-            left = solve_triangular(self.prompt_left, parts["prompt"], lower=True, trans="T")
-            out["push"][:, free.prompt] += solve_triangular(
-                self.prompt_right, left.T, lower=True, trans="T"
-            ).T
+            out["push"][:, free.prompt] += self.prompt_left @ parts["prompt"] @ self.prompt_right.T
         if free.initial_factor:
             out["initial_factor"] += self.initial @ parts["initial"]
         if free.sustained_factor:
             out["sustained_factor"] += self.sustained @ parts["sustained"]
         for name, scale in self.scalars.items():
             out[name] = out[name] + scale * parts[name]
-        return out
+        return stretch(out, self.stretches @ parts["stretches"]) if self.stretches.size else out
+
+    def frame(self, flat: np.ndarray) -> np.ndarray:
+        """Map of the latent space that the stretches in a flat vector make, shape (D, D)."""
+        return stretch_map(self.stretches @ self._split(flat)["stretches"], len(self.prompt_left))
 
     def _rows(self, values: dict[str, np.ndarray]) -> np.ndarray:
         return np.concatenate(
@@ -121,23 +130,33 @@ class Scaling:
             axis=1,
         )
 
-    def pull_back(self, gradient: dict[str, np.ndarray]) -> np.ndarray:
-        """Gradient by the flat vector from the gradient by the parameters."""
+    def longest(self, direction: np.ndarray) -> float:
+        """Share of a step, at most one, that stretches no axis of the latent space too far at once."""
+        along = float(np.linalg.norm(self.stretches @ self._split(direction)["stretches"]))
+        return min(1.0, _MAX_STRETCH / max(along, 1e-300))
+
+    def pull_back(self, gradient: dict[str, np.ndarray], flat: np.ndarray | None = None) -> np.ndarray:
+        """Gradient by the flat vector, at ``flat`` (default: zero), from that by the parameters."""
         free = self.freedom
+        by_stretch = np.zeros(0)
+        if self.stretches.size:
+            flat = np.zeros(self.size) if flat is None else flat
+            along = self.stretches @ self._split(flat)["stretches"]
+            gradient, by_stretch = pull_through(self.parameters(flat), along, gradient)
+            by_stretch = self.stretches.T @ by_stretch
         blocks = [gradient["readout"], gradient["log_rate"][:, None]]
         units = np.concatenate([*blocks, gradient["drift"]] if free.drift else blocks, axis=1)
-        pieces = [np.linalg.solve(self.units, units[:, :, None]).ravel()]
-        rows = self._rows(gradient)
-        pieces.append(solve_triangular(self.steps, rows.T, lower=True).T.ravel())
+        pieces = [np.einsum("nij,ni->nj", self.units, units).ravel()]
+        pieces.append((self._rows(gradient) @ self.steps).ravel())
         if len(free.prompt):
-            left = solve_triangular(self.prompt_left, gradient["push"][:, free.prompt], lower=True)
-            pieces.append(solve_triangular(self.prompt_right, left.T, lower=True).T.ravel())
+            prompt = self.prompt_left.T @ gradient["push"][:, free.prompt] @ self.prompt_right
+            pieces.append(prompt.ravel())
         if free.initial_factor:
             pieces.append((self.initial.T @ gradient["initial_factor"]).ravel())
         if free.sustained_factor:
             pieces.append((self.sustained.T @ gradient["sustained_factor"]).ravel())
         pieces += [np.ravel(scale * gradient[name]) for name, scale in self.scalars.items()]
-        return np.concatenate(pieces)
+        return np.concatenate([*pieces, by_stretch])
 
 
 def make_scaling(
@@ -146,26 +165,27 @@ def make_scaling(
     freedom: Freedom,
     packed: Packed,
     posteriors: list[tuple[Path, Moments]],
-    share: float,
 ) -> Scaling:
     """Scaling from the posterior at the starting values.
 
     Parameters
     ----------
     posteriors : list of (Path, Moments)
-        Modes and covariances of the first chunks of ``packed``, as many as there are.
-    share : float
-        Share of the trials that these chunks hold; information is scaled up by its inverse.
+        Modes and covariances of every chunk of ``packed``.
     """
+    stride = max(1, packed.n_trials // _SCALING_TRIALS)
+    share = sum(len(rows[::stride]) for rows in packed.members) / packed.n_trials
     d, before = setup.latent_dim, setup.n_before
     n_cue, lasting, prompt = setup.model.n_bumps, freedom.lasting, freedom.prompt
     k_unit, k_step = d + 1 + setup.n_drift * freedom.drift, d + 1 + n_cue + len(lasting)
     units = np.zeros((setup.n_units, k_unit, k_unit))
     steps = np.zeros((k_step, k_step))
     rows_gram = np.zeros((len(prompt), len(prompt)))
-    for chunk, (mode, moments) in zip(packed.chunks, posteriors, strict=False):
-        x, cov = np.asarray(mode.x), np.asarray(moments.covariance)
-        mask, drift, rows = np.asarray(chunk.mask), np.asarray(chunk.drift), np.asarray(chunk.rows)
+    for chunk, (mode, moments) in zip(packed.chunks, posteriors, strict=True):
+        # Lanes are sorted by length, then by session time: every so many of them cover both.
+        x, cov = np.asarray(mode.x)[..., ::stride], np.asarray(moments.covariance)[..., ::stride]
+        mask, drift = np.asarray(chunk.mask)[:, ::stride], np.asarray(chunk.drift)[:, ::stride]
+        rows = np.asarray(chunk.rows)[:, ::stride]
         n_time = len(x)
         at = np.nonzero(mask)
         spread = np.moveaxis(cov, -1, 1)[at]
@@ -216,13 +236,14 @@ def make_scaling(
     return Scaling(
         centre=centre,
         freedom=freedom,
-        units=np.stack([_factor(unit / share + prior, 1.0) for unit in units]),
-        steps=_factor(steps / (share * noise), 1.0),
-        prompt_left=_factor(np.linalg.inv(initial_cov), 0.0),
-        prompt_right=_factor(rows_gram / share, 1e-6) if len(prompt) else np.zeros((0, 0)),
+        units=np.stack([_unit_move(unit / share + prior, 1.0) for unit in units]),
+        steps=_unit_move(steps / (share * noise), 1.0),
+        prompt_left=_unit_move(np.linalg.inv(initial_cov), 0.0),
+        prompt_right=_unit_move(rows_gram / share, 1e-6) if len(prompt) else np.zeros((0, 0)),
         initial=np.linalg.cholesky(initial_cov) / np.sqrt(2 * n_trials),
         sustained=lasting_size * np.eye(d),
         scalars=scalars,
+        stretches=np.zeros((n_stretches(d), 0)),
     )
 
 
