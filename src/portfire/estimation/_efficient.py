@@ -150,9 +150,7 @@ def make_efficient(
     freedom = free_parameters(free or fitted.account, setup, fitted.drift)
     base = fitted.params
     objective(base)
-    n_chunks = min(len(packed.chunks), 3)
-    seen = sum(len(rows) for rows in packed.members[:n_chunks]) / packed.n_trials
-    scaling = make_scaling(base, setup, freedom, packed, objective.last[:n_chunks], seen)
+    scaling = make_scaling(base, setup, freedom, packed, objective.last)
     k = directions.size
     still, nowhere = np.zeros(scaling.size), np.zeros(k)
 
