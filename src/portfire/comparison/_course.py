@@ -150,7 +150,15 @@ def find_course(fitted: Fit, trials: Trials, source: str, seed: int = 0) -> Cour
     pulled = information @ own.ravel() + efficient.score(trials)
     smoothing, mean, cov = _smooth(information, pulled, penalty)
     return _describe(
-        setup.columns, source, prompt, edges * setup.bin_s, setup.bin_s, weight, mean, cov, smoothing
+        setup.columns,
+        source,
+        prompt,
+        np.asarray(edges * setup.bin_s, dtype=float),
+        setup.bin_s,
+        weight,
+        mean,
+        cov,
+        smoothing,
     )
 
 

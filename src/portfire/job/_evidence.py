@@ -21,6 +21,7 @@ from portfire.comparison import (
 )
 from portfire.estimation import fit_from_parts
 from portfire.job._findings import Findings
+from portfire.job._lasting import describe_persistence
 from portfire.job._stages import ALL
 from portfire.job._store import Store
 from portfire.session import explain_by_time
@@ -60,12 +61,27 @@ def collect_contrasts(findings: Findings, store: Store) -> Evidences:
     rows: list[dict[str, Any]] = []
     if sources:
         contrasts = {
-            shift: {c.source: c for c in contrast_sources(s, sources, level, min_gain)}
+            shift: {
+                c.source: c
+                for c in contrast_sources(
+                    s, sources, level, min_gain, {} if shift else _drawn(findings, store)
+                )
+            }
             for shift, s in by_shift.items()
         }
         for source in sources:
             rows.append(_row(findings, store, source, {s: found[source] for s, found in contrasts.items()}))
     return Evidences(tuple(rows), scores, n_train, tuple(warnings))
+
+
+def _drawn(findings: Findings, store: Store) -> dict[tuple[str, str], float]:
+    """Bootstrap p of every entry that has one; it takes the place of that of the likelihood ratio."""
+    return {
+        (source, name): float(tests["bootstrap"]["p"])
+        for source, key in findings.routes.items()
+        for name, tests in store.read_meta(key).items()
+        if name in ("initial_unique", "sustained_unique", "total") and "bootstrap" in tests
+    }
 
 
 def _score_in_sample(findings: Findings, store: Store, shift: int) -> tuple[Scored, list[str]]:
@@ -181,6 +197,9 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         "mimic": mimic,
         "carrying_mode": time_constant,
     }
+    row |= describe_persistence(findings, store, source)
+    if source in findings.routes:
+        row["tests"] = store.read_meta(findings.routes[source])
     if source == "context":
         row["time_r2"] = confounded
     if verdict.label == "undetermined":

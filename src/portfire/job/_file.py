@@ -78,9 +78,21 @@ class Decode:
 
 @dataclass(frozen=True)
 class Tests:
-    """The level of all tests."""
+    """How tests are done.
+
+    Parameters
+    ----------
+    level : float
+        Of all tests.
+    bootstrap : int
+        Sessions drawn at most for each p of the contrasts; 0: none are drawn.
+    assignment : {"free", "blocked", "sequence"}
+        How the task dealt intervals and contexts to trials.
+    """
 
     level: float
+    bootstrap: int = 0
+    assignment: str = "free"
 
 
 @dataclass(frozen=True)

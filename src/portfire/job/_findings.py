@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 from portfire.job._file import Job
 from portfire.job._stages import Sizes
@@ -26,6 +27,10 @@ class Findings:
     describe, causal : str, tuple of str
         Keys of the described fit and of the causal states.
     warnings, not_run : tuple of str
+    profiles : mapping of (int, str) to str
+        Key of the persistence profile by shift of the size and source.
+    routes : mapping of str to str
+        Key of the tests of a source's routes.
     """
 
     job: Job
@@ -37,3 +42,5 @@ class Findings:
     causal: tuple[str, ...]
     warnings: tuple[str, ...]
     not_run: tuple[str, ...]
+    profiles: Mapping[tuple[int, str], str] = field(default_factory=dict)
+    routes: Mapping[str, str] = field(default_factory=dict)

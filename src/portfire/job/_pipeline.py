@@ -59,6 +59,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     job = replace(job, compare=replace(job.compare, sources=present))
     stages = replace(stages, job=job)
     ladders = _run_ladders(stages, sizes)
+    profiles, routes = _run_tests(stages, sizes, ladders)
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
@@ -70,9 +71,21 @@ def _run_session(job: Job, workspace: Workspace) -> None:
         not_run.append("No contrasts: the job names no source that this session has.")
     if not decodings:
         not_run.append("No decode: no trial has a response, or the job names no cutoff.")
+    if present and not job.tests.bootstrap:
+        not_run.append("No bootstrap of the contrasts: the job asks for no draws ([tests] bootstrap).")
     warnings = [text for found in decodings for text in found.warnings]
     findings = Findings(
-        job, trials, sizes, ladders, decodings, describe, causal, tuple(warnings), tuple(not_run)
+        job,
+        trials,
+        sizes,
+        ladders,
+        decodings,
+        describe,
+        causal,
+        tuple(warnings),
+        tuple(not_run),
+        profiles,
+        routes,
     )
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
@@ -122,6 +135,28 @@ def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str
     }
     stages.run(sorted(tasks.values(), key=lambda task: -task.kwargs["latent_dim"]))
     return {which: task.key for which, task in tasks.items()}
+
+
+def _run_tests(
+    stages: Stages, sizes: Sizes, ladders: dict[tuple[int, int, str], str]
+) -> tuple[dict[tuple[int, str], str], dict[str, str]]:
+    """Persistence of every source's push at the chosen size and its neighbours, and tests of its routes."""
+    best = sizes.chosen[ALL]
+    profiles = {}
+    for shift in sorted({shift for shift, _, _ in ladders}):
+        size = shifted(best, shift, len(stages.trials.unit))
+        assert size is not None
+        for source in stages.job.compare.sources:
+            ladder = ladders[shift, ALL, source if shift else ""]
+            profiles[shift, source] = stages.profile_task(size, ladder, source, shift != 0)
+    routes = {
+        source: stages.routes_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
+    }
+    stages.run(sorted([*profiles.values(), *routes.values()], key=lambda task: -task.kwargs["latent_dim"]))
+    return (
+        {which: task.key for which, task in profiles.items()},
+        {source: task.key for source, task in routes.items()},
+    )
 
 
 def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:

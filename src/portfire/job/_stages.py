@@ -28,6 +28,7 @@ Split = tuple[tuple[int, ...], int | None]
 # With a dimension to spare a search creeps along a ridge; what it has after this many steps lacks a nat or
 # two in all, which is little beside the smallest gain worth having.
 MAX_ITERATIONS, NEIGHBOUR_ITERATIONS = 300, 50
+_OF_TESTS = ("profile_push", "test_routes", "check_fit", "score_rivals")
 
 
 @dataclass(frozen=True)
@@ -91,7 +92,8 @@ class Stages:
             deps=list(deps),
             kwargs=dict(kwargs),
         )
-        return Task(name, key, f"portfire.job._work:{function}", kwargs, tuple(deps), stage)
+        module = "_work_tests" if function in _OF_TESTS else "_work"
+        return Task(name, key, f"portfire.job.{module}:{function}", kwargs, tuple(deps), stage)
 
     def run(self, tasks: Sequence[Task]) -> dict[str, dict[str, Any]]:
         """Run tasks in the workspace."""
@@ -253,3 +255,25 @@ class Stages:
         only = f" for {sources[0]}" if len(sources) == 1 else ""
         name = f"accounts{only} at {size.latent_dim} latent dimensions, {what}"
         return self.task("fit_ladder", name, "accounts", [full], **kwargs)
+
+    def profile_task(self, size: Size, ladder: str, source: str, neighbour: bool) -> Task:
+        """Profile the persistence of a source's push from the accounts of a ladder on all trials."""
+        kwargs = {
+            **self._common(size, []),
+            "source": source,
+            "tolerance": NEIGHBOUR_TOLERANCE if neighbour else ALL_TOLERANCE,
+            "max_iterations": NEIGHBOUR_ITERATIONS if neighbour else MAX_ITERATIONS,
+            "course": not neighbour,
+        }
+        name = f"persistence of the {source} at {size.latent_dim} latent dimensions"
+        return self.task("profile_push", name, "persistence", [ladder], **kwargs)
+
+    def routes_task(self, size: Size, ladder: str, source: str) -> Task:
+        """Test the routes of a source from the accounts of a ladder on all trials."""
+        kwargs = {
+            **self._common(size, []),
+            "source": source,
+            "bootstrap": self.job.tests.bootstrap,
+            "assignment": self.job.tests.assignment,
+        }
+        return self.task("test_routes", f"tests of the {source}", "tests", [ladder], **kwargs)

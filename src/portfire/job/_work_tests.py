@@ -1,0 +1,172 @@
+"""What runs in worker processes beside the fits: persistence of pushes and tests of routes."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from portfire.accounts import Account, make_design
+from portfire.comparison import (
+    Bootstrap,
+    Course,
+    DrawnP,
+    block_of,
+    bootstrap_score,
+    find_course,
+    profile_persistence,
+    randomise_source,
+    robust_p,
+    summarise_profile,
+)
+from portfire.errors import PortfireError
+from portfire.estimation import Efficient, Fit, fit, fit_hazard, make_efficient, push_directions, with_hazard
+from portfire.job._atomic import finite
+from portfire.job._shared import read_trials
+from portfire.job._store import Store
+from portfire.job._work import _let_go, read_fit
+from portfire.session import Trials
+
+REMOVED = {"initial_unique": "sustained", "sustained_unique": "initial", "total": "none"}
+_RANDOM_DRAWS, _STOP_AT = 999, 20
+
+
+def _read_routes(store: Path, ladder: str, source: str) -> dict[str, Fit]:
+    """Fits to all trials by the source's route, the other sources by both."""
+    accounts = Store(store).read_meta(ladder)["accounts"]
+    full = Account.parse(next(iter(accounts)))
+    present = tuple(s for s in ("interval", "context", "trial") if full.route(s) == "both")
+    full = full.restrict(present)
+    return {
+        route: read_fit(store, accounts[str(full.replace(source, route))]["key"])
+        for route in ("none", "initial", "sustained", "both")
+    }
+
+
+def profile_push(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Profile the persistence of a source's push, and where asked estimate its time course."""
+    _let_go(int(kwargs["latent_dim"]))
+    trials, source = read_trials(data), str(kwargs["source"])
+    ends = _read_routes(store, deps[0], source)
+
+    def refit(account: Account, start: Fit) -> Fit:
+        return fit(
+            trials,
+            start.setup.model,
+            account,
+            seed=int(kwargs["seed"]),
+            start=start,
+            drift=bool(kwargs["drift"]),
+            tolerance=float(kwargs["tolerance"]),
+            max_iterations=int(kwargs["max_iterations"]),
+        )
+
+    profile = profile_persistence(source, ends, refit)
+    found = summarise_profile(profile)
+    content: dict[str, Any] = {
+        "source": source,
+        "grid_s": list(profile.persistence_s),
+        "values": profile.values.tolist(),
+        "both": profile.both,
+        "n_extra": profile.n_extra,
+        "estimate_s": found.estimate_s,
+        "ci95_s": list(found.ci95_s),
+        "two_pushes": found.two_pushes,
+        "behind_both": found.behind_both,
+        "course": None,
+    }
+    if kwargs["course"] and source != "trial":
+        assert profile.best is not None
+        around = ends["both"] if found.two_pushes else profile.best
+        try:
+            content["course"] = _describe_course(find_course(around, trials, source, int(kwargs["seed"])))
+        except PortfireError as error:
+            content["course"] = {"absent": str(error)}
+    Store(store).write(key, finite(content), {})
+    return {"nats": float(np.max(profile.values))}
+
+
+def _describe_course(course: Course) -> dict[str, Any]:
+    low, high = course.band()
+    return {
+        "levels": list(course.levels),
+        "edges_s": course.edges_s.tolist(),
+        "at_cue": course.at_cue.tolist(),
+        "at_cue_se": course.at_cue_se.tolist(),
+        "rate": course.rate.tolist(),
+        "rate_low": low.tolist(),
+        "rate_high": high.tolist(),
+        "share_on_axis": course.share,
+    }
+
+
+def test_routes(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Tests of a source's routes that lean on the model less than the likelihood ratio does."""
+    _let_go(int(kwargs["latent_dim"]))
+    trials, source, seed = read_trials(data), str(kwargs["source"]), int(kwargs["seed"])
+    by_route = _read_routes(store, deps[0], source)
+    full = by_route["both"].account
+    block = block_of(trials.index, trials.n_session, int(kwargs["folds"]))
+    rows = make_design(trials).rows
+    out: dict[str, Any] = {}
+    for place, (entry, route) in enumerate(REMOVED.items()):
+        fitted = by_route[route]
+        directions = push_directions(full, fitted.account, fitted.params, fitted.setup, rows)
+        efficient = make_efficient(fitted, trials, directions, np.random.default_rng([seed, 31, place]))
+        tests: dict[str, Any] = {"blocks": _row(robust_p(efficient, trials, block, _RANDOM_DRAWS, seed))}
+        if kwargs["bootstrap"]:
+            tests["bootstrap"] = _bootstrap(efficient, fitted, by_route["both"], trials, kwargs)
+        if entry == "total" and source != "trial":
+            dealt = randomise_source(
+                fitted, trials, source, str(kwargs["assignment"]), False, _RANDOM_DRAWS, seed
+            )
+            tests["labels"] = {**_row(dealt), "assignment": kwargs["assignment"]}
+            if source == "context" and trials.responded.any():
+                tests["labels_matched"] = _match(fitted, trials, seed)
+        out[entry] = tests
+    Store(store).write(key, finite(out), {})
+    return {"entries": len(out)}
+
+
+def _match(fitted: Fit, trials: Trials, seed: int) -> dict[str, Any]:
+    try:
+        return _row(randomise_source(fitted, trials, "context", "free", True, _RANDOM_DRAWS, seed))
+    except PortfireError as error:
+        return {"p": None, "absent": str(error)}
+
+
+def _row(found: DrawnP) -> dict[str, Any]:
+    return {"p": found.p, "se": found.se, "draws": found.n_draws}
+
+
+def _bootstrap(
+    efficient: Efficient, fitted: Fit, full: Fit, trials: Trials, kwargs: dict[str, Any]
+) -> dict[str, Any]:
+    hazard = fit_hazard(fitted, trials)
+    seed = int(kwargs["seed"])
+
+    def refit(drawn: Trials) -> float:
+        again = fit(drawn, fitted.setup.model, fitted.account, seed=seed, start=fitted, tolerance=0.1)
+        larger = fit(drawn, fitted.setup.model, full.account, seed=seed, start=again, tolerance=0.1)
+        return 2 * (larger.value - again.value)
+
+    if hazard is not None:
+        efficient = replace(efficient, fitted=with_hazard(fitted, hazard))
+    found: Bootstrap = bootstrap_score(
+        efficient, trials, seed, int(kwargs["bootstrap"]), _STOP_AT, hazard is not None, refit
+    )
+    checks = found.checks
+    return {
+        **_row(found.drawn),
+        "statistic": found.statistic,
+        "p_at_bound": None if found.at_bound is None else found.at_bound.p,
+        "refits": len(checks),
+        "refits_mean_score": float(checks[:, 0].mean()) if len(checks) else None,
+        "refits_mean_lr": float(checks[:, 1].mean()) if len(checks) else None,
+    }
