@@ -20,6 +20,7 @@ from portfire.report import draw_report
 
 FIGURES = (
     "contrasts",
+    "persistence",
     "scores",
     "behaviour",
     "paths",
@@ -291,7 +292,7 @@ def test_result_alone_is_enough_and_old_figures_go(drawn: Path, tmp_path: Path) 
     for name in ("trials.parquet", "scores.parquet", "decode.parquet", "latents.nc", "rates.nc"):
         (out / name).unlink()
     page = read_page(out)
-    assert sorted(path.stem for path in (out / "figures").iterdir()) == ["contrasts", "decode"]
+    assert sorted(path.stem for path in (out / "figures").iterdir()) == ["contrasts", "decode", "persistence"]
     assert "is not drawn: the run folder holds no such predictions (decode.parquet)" in page.words
     assert "the run folder holds no latents.nc and no trials.parquet" in page.words
     assert "the run folder holds no rates.nc" in page.words

@@ -16,6 +16,7 @@ from portfire.comparison import (
     carrying_time_constant,
     contrast_sources,
     describe_mimic,
+    likelihood_ratio_p,
     overrule,
     reconcile,
 )
@@ -69,6 +70,12 @@ def collect_contrasts(findings: Findings, store: Store) -> Evidences:
             }
             for shift, s in by_shift.items()
         }
+        n_draws = findings.job.tests.bootstrap
+        if n_draws and 3 * len(sources) > level * (1 + n_draws):
+            warnings.append(
+                f"With {n_draws} bootstrap draws no p of {3 * len(sources)} entries can reach {level:g} "
+                f"after adjustment; set [tests] bootstrap to {int(np.ceil(3 * len(sources) / level))} or more."
+            )
         for source in sources:
             rows.append(_row(findings, store, source, {s: found[source] for s, found in contrasts.items()}))
     return Evidences(tuple(rows), scores, n_train, tuple(warnings))
@@ -186,6 +193,7 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
                 "df": entry.n_fixed or entry.n_params,
                 "boundary": bool(entry.cov_dims),
                 "p_raw": entry.p_raw,
+                "p_chi2": likelihood_ratio_p(entry.statistic, entry.n_fixed, entry.cov_dims),
             }
             for name, entry in here.entries.items()
         },

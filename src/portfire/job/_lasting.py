@@ -60,7 +60,7 @@ def say_persistence(here: dict[str, Any], above: dict[str, Any] | None) -> str:
             "sustained push together, so that no one persistence describes them"
         )
     low, high = here["ci95_s"]
-    interval = f"95 % interval {_say_time(low)} to {_say_time(high)}"
+    interval = f"95 % interval {low:.2g} s " + ("or more" if high is None else f"to {high:.2g} s")
     words = f"the push lasts {_say_time(here['estimate_s'])} ({interval})"
     if low == 0 and high is None:
         words += ": these data say nothing on how long it lasts"

@@ -13,7 +13,6 @@ from portfire.comparison import (
     Bootstrap,
     Course,
     DrawnP,
-    block_of,
     bootstrap_score,
     find_course,
     profile_persistence,
@@ -31,6 +30,8 @@ from portfire.session import Trials
 
 REMOVED = {"initial_unique": "sustained", "sustained_unique": "initial", "total": "none"}
 _RANDOM_DRAWS, _STOP_AT = 999, 20
+# Signs are turned by blocks of so many trials, fewer where there would be less than so many blocks.
+_BLOCK, _LEAST_BLOCKS = 25, 24
 
 
 def _read_routes(store: Path, ladder: str, source: str) -> dict[str, Fit]:
@@ -112,7 +113,7 @@ def test_routes(
     trials, source, seed = read_trials(data), str(kwargs["source"]), int(kwargs["seed"])
     by_route = _read_routes(store, deps[0], source)
     full = by_route["both"].account
-    block = block_of(trials.index, trials.n_session, int(kwargs["folds"]))
+    block = np.asarray(trials.index) // max(1, min(_BLOCK, trials.n_session // _LEAST_BLOCKS))
     rows = make_design(trials).rows
     out: dict[str, Any] = {}
     for place, (entry, route) in enumerate(REMOVED.items()):
