@@ -74,7 +74,7 @@ def collect_contrasts(findings: Findings, store: Store) -> Evidences:
         if n_draws and 3 * len(sources) > level * (1 + n_draws):
             warnings.append(
                 f"With {n_draws} bootstrap draws no p of {3 * len(sources)} entries can reach {level:g} "
-                f"after adjustment; set [tests] bootstrap to {int(np.ceil(3 * len(sources) / level))} or more."
+                f"after adjustment; set [tests] bootstrap to {3 * len(sources) / level:.0f} or more."
             )
         for source in sources:
             rows.append(_row(findings, store, source, {s: found[source] for s, found in contrasts.items()}))
