@@ -24,6 +24,7 @@ from ._persistence import (
     profile_persistence,
     summarise_profile,
 )
+from ._rivals import Rival, RivalScore, list_rivals, name_winner, score_rival
 from ._robust import (
     ASSIGNMENTS,
     deal_labels,
@@ -47,6 +48,11 @@ from ._verdict import (
 )
 
 __all__ = [
+    "Rival",
+    "RivalScore",
+    "list_rivals",
+    "name_winner",
+    "score_rival",
     "Course",
     "cut_time",
     "find_course",

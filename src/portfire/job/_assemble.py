@@ -16,6 +16,7 @@ from portfire.dynamics import ModelFile
 from portfire.job._atomic import write_dataset_atomic, write_json_atomic, write_table_atomic
 from portfire.job._evidence import Evidences
 from portfire.job._findings import Findings
+from portfire.job._lasting import list_rivals_of
 from portfire.job._result import RESULT
 from portfire.job._stages import ALL, Size
 from portfire.job._store import Store
@@ -67,6 +68,9 @@ def write_outputs(
         "chosen": _chosen(findings),
         "accounts": _account_rows(findings, evidence, others, models[0].readout == "poisson"),
         "contrasts": list(evidence.rows),
+        "rivals": [
+            row for source in findings.job.compare.sources for row in list_rivals_of(findings, store, source)
+        ],
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),
         "versions": library_versions(),

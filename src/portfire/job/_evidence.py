@@ -22,7 +22,7 @@ from portfire.comparison import (
 )
 from portfire.estimation import fit_from_parts
 from portfire.job._findings import Findings
-from portfire.job._lasting import describe_persistence
+from portfire.job._lasting import describe_persistence, list_rivals_of, name_rival
 from portfire.job._stages import ALL
 from portfire.job._store import Store
 from portfire.session import explain_by_time
@@ -206,6 +206,13 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         "carrying_mode": time_constant,
     }
     row |= describe_persistence(findings, store, source)
+    rivals = list_rivals_of(findings, store, source)
+    if rivals:
+        row["rival"] = name_rival(rivals, verdict.label)
+        if row["rival"] is not None:
+            row["words"] += (
+                f" But {row['rival']} describes these data better than the pushes of this verdict."
+            )
     if source in findings.routes:
         row["tests"] = store.read_meta(findings.routes[source])
     if source == "context":

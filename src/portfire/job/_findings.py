@@ -31,6 +31,8 @@ class Findings:
         Key of the persistence profile by shift of the size and source.
     routes : mapping of str to str
         Key of the tests of a source's routes.
+    rivals : mapping of str to str
+        Key of the rivals of a source's pushes.
     """
 
     job: Job
@@ -44,3 +46,4 @@ class Findings:
     not_run: tuple[str, ...]
     profiles: Mapping[tuple[int, str], str] = field(default_factory=dict)
     routes: Mapping[str, str] = field(default_factory=dict)
+    rivals: Mapping[str, str] = field(default_factory=dict)

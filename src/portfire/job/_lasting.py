@@ -1,4 +1,4 @@
-"""How long pushes last, as it stands in a contrast's row."""
+"""How long pushes last and what rivals them, as it stands in a contrast's row."""
 
 from __future__ import annotations
 
@@ -82,3 +82,17 @@ def _say_time(seconds: float | None) -> str:
 def _overlap(first: list[float | None], second: list[float | None]) -> bool:
     (a, b), (c, d) = ([np.inf if x is None else x for x in pair] for pair in (first, second))
     return bool(a <= d and c <= b)
+
+
+def list_rivals_of(findings: Findings, store: Store, source: str) -> list[dict[str, Any]]:
+    """Rows of the result on the rivals of one source's pushes."""
+    if source not in findings.rivals:
+        return []
+    rows: list[dict[str, Any]] = store.read_meta(findings.rivals[source])["rivals"]
+    return rows
+
+
+def name_rival(rows: list[dict[str, Any]], verdict: str) -> str | None:
+    """The rival that beats a verdict by most; None where none does."""
+    better = [row for row in rows if verdict in row.get("beats", [])]
+    return max(better, key=lambda row: row["ahead_nats"][verdict])["rival"] if better else None

@@ -59,7 +59,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     job = replace(job, compare=replace(job.compare, sources=present))
     stages = replace(stages, job=job)
     ladders = _run_ladders(stages, sizes)
-    profiles, routes = _run_tests(stages, sizes, ladders)
+    profiles, routes, rivals = _run_tests(stages, sizes, ladders)
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
@@ -86,6 +86,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
         tuple(not_run),
         profiles,
         routes,
+        rivals,
     )
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
@@ -139,8 +140,8 @@ def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str
 
 def _run_tests(
     stages: Stages, sizes: Sizes, ladders: dict[tuple[int, int, str], str]
-) -> tuple[dict[tuple[int, str], str], dict[str, str]]:
-    """Persistence of every source's push at the chosen size and its neighbours, and tests of its routes."""
+) -> tuple[dict[tuple[int, str], str], dict[str, str], dict[str, str]]:
+    """Persistence of every source's push at each size, tests of its routes, and rivals."""
     best = sizes.chosen[ALL]
     profiles = {}
     for shift in sorted({shift for shift, _, _ in ladders}):
@@ -152,10 +153,15 @@ def _run_tests(
     routes = {
         source: stages.routes_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
     }
-    stages.run(sorted([*profiles.values(), *routes.values()], key=lambda task: -task.kwargs["latent_dim"]))
+    rivals = {
+        source: stages.rivals_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
+    }
+    tasks = [*profiles.values(), *routes.values(), *rivals.values()]
+    stages.run(sorted(tasks, key=lambda task: -task.kwargs["latent_dim"]))
     return (
         {which: task.key for which, task in profiles.items()},
         {source: task.key for source, task in routes.items()},
+        {source: task.key for source, task in rivals.items()},
     )
 
 

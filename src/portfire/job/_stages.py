@@ -268,6 +268,11 @@ class Stages:
         name = f"persistence of the {source} at {size.latent_dim} latent dimensions"
         return self.task("profile_push", name, "persistence", [ladder], **kwargs)
 
+    def rivals_task(self, size: Size, ladder: str, source: str) -> Task:
+        """Fit the rivals of a source's pushes beside the accounts of a ladder on all trials."""
+        kwargs = {**self._common(size, []), "source": source, "tolerance": HELD_OUT_TOLERANCE}
+        return self.task("score_rivals", f"rivals of the {source}", "rivals", [ladder], **kwargs)
+
     def routes_task(self, size: Size, ladder: str, source: str) -> Task:
         """Test the routes of a source from the accounts of a ladder on all trials."""
         kwargs = {

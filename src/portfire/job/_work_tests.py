@@ -15,13 +15,24 @@ from portfire.comparison import (
     DrawnP,
     bootstrap_score,
     find_course,
+    list_rivals,
     profile_persistence,
     randomise_source,
     robust_p,
+    score_rival,
     summarise_profile,
 )
 from portfire.errors import PortfireError
-from portfire.estimation import Efficient, Fit, fit, fit_hazard, make_efficient, push_directions, with_hazard
+from portfire.estimation import (
+    Efficient,
+    Fit,
+    count_route,
+    fit,
+    fit_hazard,
+    make_efficient,
+    push_directions,
+    with_hazard,
+)
 from portfire.job._atomic import finite
 from portfire.job._shared import read_trials
 from portfire.job._store import Store
@@ -89,6 +100,41 @@ def profile_push(
             content["course"] = {"absent": str(error)}
     Store(store).write(key, finite(content), {})
     return {"nats": float(np.max(profile.values))}
+
+
+def score_rivals(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Fit the rivals of a source's pushes in their place and beside them."""
+    _let_go(int(kwargs["latent_dim"]))
+    trials, source = read_trials(data), str(kwargs["source"])
+    fits = _read_routes(store, deps[0], source)
+    setup, full = fits["both"].setup, fits["both"].account
+    own = count_route(full, source, 0.0, setup)
+    n_params = {"none": 0, "initial": own, "sustained": own, "both": 2 * own}
+    rows: list[dict[str, Any]] = []
+    for rival in list_rivals(setup):
+        if rival.source != source:
+            continue
+        try:
+            found = score_rival(rival, fits, trials, n_params, float(kwargs["tolerance"]))
+        except PortfireError as error:
+            rows.append({"rival": rival.name, "source": source, "absent": str(error)})
+            continue
+        routes = {"neither": "none"} | {route: route for route in ("initial", "sustained", "both")}
+        rows.append(
+            {
+                "rival": rival.name,
+                "source": source,
+                "parameters": rival.n_extra + n_params[rival.instead],
+                "ahead_nats": {label: found.margin(label) for label in routes},
+                "beats": [label for label in routes if found.beats(label)],
+                "beside_nats": found.beside_nats,
+                "p": found.p,
+            }
+        )
+    Store(store).write(key, finite({"rivals": rows}), {})
+    return {"rivals": len(rows)}
 
 
 def _describe_course(course: Course) -> dict[str, Any]:

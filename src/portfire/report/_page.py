@@ -15,7 +15,7 @@ from portfire.report._folder import RunFolder
 from portfire.report._persistence import state_persistence
 from portfire.report._rates import state_rates
 from portfire.report._style import Absent, Drawn, clean
-from portfire.report._tables_tests import list_tests
+from portfire.report._tables_tests import list_rivals, list_tests
 
 
 def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
@@ -42,6 +42,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
             "contrasts": _tables.list_contrasts(run),
             "dims": _tables.list_dims(run),
             "tests": list_tests(run),
+            "rivals": list_rivals(run),
             "accounts": _tables.list_accounts(run),
             "sizes": _tables.list_sizes(run),
             "behaviour": _tables.list_behaviour(run),
@@ -111,6 +112,7 @@ def _card(contrast: Mapping[str, Any], run: RunFolder, n_used: int | None) -> di
                 _words.state_open(contrast, n_used),
                 _words.state_evidence(contrast, run.min_gain),
                 state_persistence(contrast),
+                f"But {contrast['rival']} describes these data better." if contrast.get("rival") else None,
                 contrast.get("mimic"),
                 _words.state_dims(contrast, run.part("chosen").get("latent_dim")),
             )

@@ -46,7 +46,12 @@ def draw_persistence(run: RunFolder) -> Drawn | Absent:
         right.set_title(f"{name}: push by time" if levels else f"{name}: no time course")
         alts.append(f"{name}: {row.get('persistence_words')}")
     grid[-1][0].set_xlabel("persistence h (s); 0: initial, ∞: to the response")
-    grid[-1][1].set_xlabel("time from the set cue (s)")
+    for right in [axes for axes in grid[:, 1] if axes.axison][-1:]:
+        right.set_xlabel("time from the set cue (s)")
+    handles, labels = max(
+        (axes.get_legend_handles_labels() for axes in grid[:, 0]), key=lambda pair: len(pair[1])
+    )
+    figure.legend(handles, labels, loc="outside upper left", ncols=len(labels))
     alt = f"Persistence of the pushes. {'. '.join(alts)}."
     caption = (
         "Left: what the log-likelihood on all trials loses (nats) when the source's push must last h "
@@ -83,7 +88,6 @@ def _draw_profile(axes: Axes, row: Mapping[str, Any], chosen: Any) -> None:
     axes.set_ylim(_TOP + 0.6, -0.6)
     axes.set_ylabel("nats lost")
     axes.grid(axis="x", color=FAINT, linewidth=0.6)
-    axes.legend(loc="lower center", ncols=len(profiles))
 
 
 def _draw_course(axes: Axes, course: Any) -> int:

@@ -7,7 +7,7 @@ from typing import Any
 
 from portfire.report._folder import RunFolder
 from portfire.report._tables import Table
-from portfire.report._words import name_source, write_p_value
+from portfire.report._words import name_source, write_number, write_p_value
 
 _ENTRIES = {"initial_unique": "initial", "sustained_unique": "sustained", "total": "both"}
 
@@ -58,3 +58,42 @@ def _drawn(test: Any) -> str:
         return ""
     error = test.get("se")
     return write_p_value(test["p"]) + (f" ± {error:.1g}" if error and error >= 5e-4 else "")
+
+
+def list_rivals(run: RunFolder) -> Table | None:
+    """Return the rivals of the pushes; None where the result holds none."""
+    verdicts = {str(c.get("source")): str(c.get("verdict")) for c in run.rows("contrasts")}
+    rows = []
+    for rival in run.rows("rivals"):
+        source = str(rival.get("source"))
+        verdict = verdicts.get(source, "")
+        against = verdict if verdict in (rival.get("ahead_nats") or {}) else "both"
+        ahead = (rival.get("ahead_nats") or {}).get(against)
+        rows.append(
+            [
+                source,
+                str(rival.get("rival")),
+                "beats the verdict" if verdict in (rival.get("beats") or []) else "",
+                against,
+                "not given" if ahead is None else write_number(ahead, 1),
+                "" if rival.get("beside_nats") is None else write_number(rival["beside_nats"], 1),
+                "" if rival.get("p") is None else write_p_value(rival["p"]),
+            ]
+        )
+    if not rows:
+        return None
+    return Table(
+        "Rivals of additive pushes",
+        (
+            ("source", "what differs between trials"),
+            ("rival", "another way in which it may differ"),
+            ("outcome", "whether it describes the data better than the verdict's account, by 2 nats or more"),
+            ("against", "the account of the source that it is set against: the verdict's, or both"),
+            ("ahead", "log-likelihood of the rival in the place of the pushes, less that of this account, "
+             "each less its number of parameters, nats on all trials"),
+            ("beside", "what the rival adds to the full account, nats on all trials"),
+            ("p", "of that addition, χ², not adjusted"),
+        ),
+        rows,
+        n_words=4,
+    )  # fmt: skip
