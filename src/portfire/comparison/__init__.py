@@ -9,6 +9,7 @@ from ._boundary import (
     mixture_weights,
 )
 from ._carry import carrying_time_constant
+from ._checks import Check, check_predictions, cut_windows, say_failed, summarise_activity
 from ._cone import score_statistic
 from ._contrast import Contrast, Entry, Scored, contrast_sources
 from ._course import Course, cut_time, find_course
@@ -48,6 +49,11 @@ from ._verdict import (
 )
 
 __all__ = [
+    "Check",
+    "check_predictions",
+    "cut_windows",
+    "say_failed",
+    "summarise_activity",
     "Rival",
     "RivalScore",
     "list_rivals",

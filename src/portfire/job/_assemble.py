@@ -71,10 +71,11 @@ def write_outputs(
         "rivals": [
             row for source in findings.job.compare.sources for row in list_rivals_of(findings, store, source)
         ],
+        "checks": store.read_meta(findings.checks)["checks"] if findings.checks else [],
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),
         "versions": library_versions(),
-        "not_run": list(findings.not_run),
+        "not_run": [*findings.not_run, *_absent_checks(findings, store)],
         "warnings": warnings,
     }
     write_json_atomic(out / RESULT, result)
@@ -133,6 +134,11 @@ def _other_models(findings: Findings, store: Store) -> list[pd.DataFrame]:
             )
         )
     return frames
+
+
+def _absent_checks(findings: Findings, store: Store) -> list[str]:
+    absent = store.read_meta(findings.checks)["absent"] if findings.checks else None
+    return [] if absent is None else [f"No predictive checks: {absent}."]
 
 
 def _sources(findings: Findings) -> tuple[str, ...]:

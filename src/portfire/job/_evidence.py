@@ -180,6 +180,9 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         verdict = overrule(
             verdict, f"context is confounded with drift, since trial time explains {confounded:.0%} of it"
         )
+    failed = store.read_meta(findings.checks)["failed"] if findings.checks else None
+    if failed is not None and verdict.label != "undetermined":
+        verdict = overrule(verdict, failed)
     row: dict[str, Any] = {"source": source, **here.scores}
     for name, entry in here.entries.items():
         row[name] = entry.evidence.to_row()

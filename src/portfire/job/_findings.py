@@ -33,6 +33,8 @@ class Findings:
         Key of the tests of a source's routes.
     rivals : mapping of str to str
         Key of the rivals of a source's pushes.
+    checks : str
+        Key of the predictive checks; empty where there are none.
     """
 
     job: Job
@@ -47,3 +49,4 @@ class Findings:
     profiles: Mapping[tuple[int, str], str] = field(default_factory=dict)
     routes: Mapping[str, str] = field(default_factory=dict)
     rivals: Mapping[str, str] = field(default_factory=dict)
+    checks: str = ""

@@ -59,7 +59,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     job = replace(job, compare=replace(job.compare, sources=present))
     stages = replace(stages, job=job)
     ladders = _run_ladders(stages, sizes)
-    profiles, routes, rivals = _run_tests(stages, sizes, ladders)
+    profiles, routes, rivals, checks = _run_tests(stages, sizes, ladders)
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
@@ -87,6 +87,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
         profiles,
         routes,
         rivals,
+        checks,
     )
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
@@ -140,7 +141,7 @@ def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str
 
 def _run_tests(
     stages: Stages, sizes: Sizes, ladders: dict[tuple[int, int, str], str]
-) -> tuple[dict[tuple[int, str], str], dict[str, str], dict[str, str]]:
+) -> tuple[dict[tuple[int, str], str], dict[str, str], dict[str, str], str]:
     """Persistence of every source's push at each size, tests of its routes, and rivals."""
     best = sizes.chosen[ALL]
     profiles = {}
@@ -156,12 +157,14 @@ def _run_tests(
     rivals = {
         source: stages.rivals_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
     }
-    tasks = [*profiles.values(), *routes.values(), *rivals.values()]
+    check = stages.check_task(best, ladders[0, ALL, ""])
+    tasks = [*profiles.values(), *routes.values(), *rivals.values(), check]
     stages.run(sorted(tasks, key=lambda task: -task.kwargs["latent_dim"]))
     return (
         {which: task.key for which, task in profiles.items()},
         {source: task.key for source, task in routes.items()},
         {source: task.key for source, task in rivals.items()},
+        check.key,
     )
 
 

@@ -273,6 +273,11 @@ class Stages:
         kwargs = {**self._common(size, []), "source": source, "tolerance": HELD_OUT_TOLERANCE}
         return self.task("score_rivals", f"rivals of the {source}", "rivals", [ladder], **kwargs)
 
+    def check_task(self, size: Size, ladder: str) -> Task:
+        """Set the recorded session among sessions drawn from the full account's fit to all trials."""
+        kwargs = {"latent_dim": size.latent_dim, "seed": self.job.seed, "level": self.job.tests.level}
+        return self.task("check_fit", "predictive checks", "checks", [ladder], **kwargs)
+
     def routes_task(self, size: Size, ladder: str, source: str) -> Task:
         """Test the routes of a source from the accounts of a ladder on all trials."""
         kwargs = {

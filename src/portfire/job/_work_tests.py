@@ -14,12 +14,16 @@ from portfire.comparison import (
     Course,
     DrawnP,
     bootstrap_score,
+    check_predictions,
+    cut_windows,
     find_course,
     list_rivals,
     profile_persistence,
     randomise_source,
     robust_p,
+    say_failed,
     score_rival,
+    summarise_activity,
     summarise_profile,
 )
 from portfire.errors import PortfireError
@@ -40,7 +44,7 @@ from portfire.job._work import _let_go, read_fit
 from portfire.session import Trials
 
 REMOVED = {"initial_unique": "sustained", "sustained_unique": "initial", "total": "none"}
-_RANDOM_DRAWS, _STOP_AT = 999, 20
+_RANDOM_DRAWS, _STOP_AT, _CHECK_DRAWS = 999, 20, 99
 # Signs are turned by blocks of so many trials, fewer where there would be less than so many blocks.
 _BLOCK, _LEAST_BLOCKS = 25, 24
 
@@ -135,6 +139,33 @@ def score_rivals(
         )
     Store(store).write(key, finite({"rivals": rows}), {})
     return {"rivals": len(rows)}
+
+
+def check_fit(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Predictive checks of the full account, on sessions whose trials end by first passage."""
+    trials = read_trials(data)
+    accounts = Store(store).read_meta(deps[0])["accounts"]
+    fitted = read_fit(store, next(iter(accounts.values()))["key"])
+    hazard = fit_hazard(fitted, trials)
+    fitted = fitted if hazard is None else with_hazard(fitted, hazard)
+    rng = np.random.default_rng([int(kwargs["seed"]), 53])
+    try:
+        windows = cut_windows(trials)
+        recorded = summarise_activity(trials, windows)
+        drawn = [
+            summarise_activity(draw_trials(fitted, trials, rng, hazard is not None), windows)
+            for _ in range(_CHECK_DRAWS)
+        ]
+        checks = check_predictions(recorded, drawn, float(kwargs["level"]))
+    except PortfireError as error:
+        Store(store).write(key, {"checks": [], "failed": None, "absent": str(error)}, {})
+        return {"checks": 0}
+    rows = [{"check": c.name, **{k: v for k, v in vars(c).items() if k != "name"}} for c in checks]
+    content = {"checks": rows, "failed": say_failed(checks), "absent": None}
+    Store(store).write(key, finite(content), {})
+    return {"checks": len(rows)}
 
 
 def _describe_course(course: Course) -> dict[str, Any]:

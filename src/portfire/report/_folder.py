@@ -32,7 +32,7 @@ _VARIABLES = {
     "latents.nc": {"state": 3, "initial": 2, "sustained": 2},
     "rates.nc": {"recorded": 3, "model": 3},
 }
-_LISTS = ("accounts", "contrasts", "decode", "sessions")
+_LISTS = ("accounts", "contrasts", "rivals", "checks", "decode", "sessions")
 
 
 @dataclass(frozen=True)

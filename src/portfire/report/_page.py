@@ -15,7 +15,7 @@ from portfire.report._folder import RunFolder
 from portfire.report._persistence import state_persistence
 from portfire.report._rates import state_rates
 from portfire.report._style import Absent, Drawn, clean
-from portfire.report._tables_tests import list_rivals, list_tests
+from portfire.report._tables_tests import list_checks, list_rivals, list_tests
 
 
 def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
@@ -43,6 +43,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
             "dims": _tables.list_dims(run),
             "tests": list_tests(run),
             "rivals": list_rivals(run),
+            "checks": list_checks(run),
             "accounts": _tables.list_accounts(run),
             "sizes": _tables.list_sizes(run),
             "behaviour": _tables.list_behaviour(run),

@@ -97,3 +97,36 @@ def list_rivals(run: RunFolder) -> Table | None:
         rows,
         n_words=4,
     )  # fmt: skip
+
+
+def list_checks(run: RunFolder) -> Table | None:
+    """Return the predictive checks; None where the result holds none."""
+    rows = [
+        [
+            str(check.get("check")),
+            "fails" if check.get("failed") else "passes",
+            write_number(check.get("recorded"), 3),
+            write_number(check.get("drawn"), 3),
+            write_number(check.get("difference"), 3),
+            write_number(check.get("matters"), 2),
+            write_p_value(check.get("p")),
+        ]
+        for check in run.rows("checks")
+    ]
+    if not rows:
+        return None
+    return Table(
+        "Predictive checks: the recorded session among sessions drawn from the fit",
+        (
+            ("check", "what is compared, in each condition"),
+            ("outcome", "fails where p is at most the level and the difference exceeds what matters; verdicts "
+             "are then undetermined"),
+            ("recorded", "of the recorded session: spikes a bin, Fano factor, or correlation"),
+            ("drawn", "the same, mean over drawn sessions"),
+            ("difference", "largest of the check: relative to the rates, of log Fano factors, of correlations"),
+            ("matters", "what the difference must exceed"),
+            ("p", "share of drawn sessions as unlike the others, adjusted over the checks (Holm)"),
+        ),
+        rows,
+        n_words=2,
+    )  # fmt: skip
