@@ -71,10 +71,10 @@ def summarise_activity(trials: Trials, windows: NDArray[np.int64]) -> dict[str, 
     -------
     dict of str to array
         ``rates``: spikes a bin of every condition, segment and unit. ``Fano factors``: mean and SD over
-        units of the log of variance over mean of the count in the window. ``noise correlations``: mean and root mean
-        square over pairs of units of the correlation of root counts in the window. ``single-trial
-        autocorrelation``: mean over units of the correlation between segments one to three apart. All
-        but the rates are within conditions, averaged by trials.
+        units of the log of variance over mean of the count in the window. ``noise correlations``: mean
+        and root mean square over pairs of units of the correlation of root counts in the window.
+        ``single-trial autocorrelation``: mean over units of the correlation of root counts between
+        segments one to three apart. All but the rates are within conditions, averaged by trials.
 
     Raises
     ------

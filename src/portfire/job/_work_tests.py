@@ -31,6 +31,7 @@ from portfire.estimation import (
     Efficient,
     Fit,
     count_route,
+    draw_trials,
     fit,
     fit_hazard,
     make_efficient,

@@ -119,11 +119,11 @@ def list_checks(run: RunFolder) -> Table | None:
         "Predictive checks: the recorded session among sessions drawn from the fit",
         (
             ("check", "what is compared, in each condition"),
-            ("outcome", "fails where p is at most the level and the difference exceeds what matters; verdicts "
-             "are then undetermined"),
+            ("outcome", "fails where p is at most the level and the difference exceeds what matters; "
+             "verdicts are then undetermined"),
             ("recorded", "of the recorded session: spikes a bin, Fano factor, or correlation"),
             ("drawn", "the same, mean over drawn sessions"),
-            ("difference", "largest of the check: relative to the rates, of log Fano factors, of correlations"),
+            ("difference", "largest of the check: relative to rates, of log Fano factors, of correlations"),
             ("matters", "what the difference must exceed"),
             ("p", "share of drawn sessions as unlike the others, adjusted over the checks (Holm)"),
         ),
