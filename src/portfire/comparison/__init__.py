@@ -37,6 +37,7 @@ from ._robust import (
     sum_blocks,
 )
 from ._size import Choice, Deficit, choose_smallest
+from ._unseen import UnseenCondition, compare_unseen, leave_out, separable_conditions
 from ._verdict import (
     Evidence,
     Verdict,
@@ -47,8 +48,18 @@ from ._verdict import (
     reconcile,
     trials_to_close,
 )
+from ._yardsticks import condition_rate_by_unit, deal_units, keep_units, null_by_unit, unseen_units
 
 __all__ = [
+    "UnseenCondition",
+    "compare_unseen",
+    "condition_rate_by_unit",
+    "deal_units",
+    "keep_units",
+    "leave_out",
+    "null_by_unit",
+    "separable_conditions",
+    "unseen_units",
     "Check",
     "check_predictions",
     "cut_windows",
