@@ -28,9 +28,6 @@ from _sweep import measure_sweep
 import portfire
 from portfire.estimation._objective import n_threads
 
-# Compiling is measured, so nothing compiled may be left from before.
-jax.config.update("jax_enable_compilation_cache", False)
-
 
 @dataclass(frozen=True)
 class Plan:
@@ -198,9 +195,15 @@ def main() -> None:
     parser.add_argument(
         "--only", nargs="+", choices=MEASUREMENTS, metavar="NAME", help=f"of {', '.join(MEASUREMENTS)}"
     )
-    parser.add_argument("--quick", action="store_true", help="small sizes: shows that it runs, not how fast")
+    parser.add_argument(
+        "--quick",
+        action="store_true",
+        help="small sizes, and code compiled before: shows that it runs, not how fast",
+    )
     parser.add_argument("--skip-jobs", action="store_true", help="leave out the job and the demo")
     options = parser.parse_args()
+    # Compiling is measured, so nothing compiled may be left from before.
+    jax.config.update("jax_enable_compilation_cache", options.quick)
     chosen = [name for name in options.only or MEASUREMENTS if not (options.skip_jobs and name in JOBS)]
     bench, load = Bench(QUICK if options.quick else FULL), os.getloadavg()
     for name in chosen:

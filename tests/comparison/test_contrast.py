@@ -51,10 +51,9 @@ def test_entries_take_the_right_route_away(setup):
     assert interval.entries["total"].p_raw == pytest.approx(chi2.sf(2 * N * 1.5, 4))
     assert interval.verdict.label == "sustained"
     assert interval.end_difference == pytest.approx(N * 1.0)
-    assert interval.excludes_other_end()
     assert interval.scores["both"] - interval.scores["none"] == pytest.approx(1.5)
     assert by_source["context"].verdict.label == "neither"
-    assert not by_source["context"].excludes_other_end()
+    assert by_source["context"].end_difference == 0.0
     trial = by_source["trial"]
     assert trial.verdict.label == "initial"
     assert trial.entries["total"].cov_dims == (2, 2)
@@ -65,7 +64,7 @@ def test_entries_take_the_right_route_away(setup):
     assert trial.entries["sustained_unique"].n_params == 3
     assert trial.entries["sustained_unique"].evidence.gain.nats_per_trial == pytest.approx(1.5 / 300)
     assert trial.entries["total"].cost == pytest.approx(3.0)
-    assert trial.excludes_other_end()
+    assert trial.end_difference == pytest.approx(-N * 0.8)
 
 
 def test_p_is_adjusted_over_all_entries(setup):

@@ -135,9 +135,51 @@ def test_verdict_that_changes_with_one_dimension_more_is_undetermined():
     assert (faded.label, faded.open) == ("undetermined", ("sustained",))
 
 
-def test_persistence_can_hold_a_verdict():
+TIED = decide(NOT_NEEDED, NOT_NEEDED)
+SUSTAINED_AHEAD = {3: 5.0, 4: 2.0}
+INITIAL_AHEAD = {3: -5.0, 4: -2.0}
+
+
+@pytest.mark.parametrize(
+    "above",
+    [TIED, decide(OPEN, OPEN), decide(NOT_NEEDED, OPEN), decide(OPEN, NEEDED)],
+)
+def test_persistence_holds_a_verdict_that_fades(above):
     verdict = decide(NOT_NEEDED, NEEDED)
-    assert reconcile(verdict, {4: decide(NEEDED, NOT_NEEDED)}, 3, persistence_excludes=True) == verdict
+    assert above.label == "undetermined"
+    assert reconcile(verdict, {4: above}, 3, SUSTAINED_AHEAD) == verdict
+
+
+@pytest.mark.parametrize(
+    "above",
+    [
+        decide(NEEDED, NEEDED),
+        decide(NEEDED, NOT_NEEDED),
+        decide(NOT_NEEDED, NOT_NEEDED, EMPTY),
+        # Open, but with the other route needed: that is a second push or the other end.
+        decide(NEEDED, OPEN),
+    ],
+)
+def test_persistence_does_not_hold_a_verdict_that_is_contradicted(above):
+    changed = reconcile(decide(NOT_NEEDED, NEEDED), {4: above}, 3, SUSTAINED_AHEAD)
+    assert changed.label == "undetermined"
+    assert f"with 4 it is {above.label}" in changed.words
+
+
+@pytest.mark.parametrize(
+    "ends",
+    [{}, {3: 5.0}, {4: 5.0}, {3: 5.0, 4: 1.9}, {3: 1.9, 4: 5.0}, {3: 5.0, 4: -5.0}, INITIAL_AHEAD],
+)
+def test_other_end_must_be_excluded_at_both_sizes(ends):
+    assert reconcile(decide(NOT_NEEDED, NEEDED), {4: TIED}, 3, ends).label == "undetermined"
+
+
+def test_the_sign_of_the_ends_is_that_of_the_verdict():
+    verdict = decide(NEEDED, NOT_NEEDED)
+    assert reconcile(verdict, {4: TIED}, 3, INITIAL_AHEAD) == verdict
+    assert reconcile(verdict, {4: TIED}, 3, SUSTAINED_AHEAD).label == "undetermined"
+    # The ends say nothing on two pushes, or on none.
+    assert reconcile(decide(NEEDED, NEEDED), {4: TIED}, 3, SUSTAINED_AHEAD).label == "undetermined"
 
 
 def test_fewer_dimensions_do_not_overrule():

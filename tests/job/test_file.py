@@ -56,7 +56,9 @@ def test_a_bare_session_gets_the_defaults_of_the_interface(folder, monkeypatch):
     assert job.out == folder / "fits" / "session"
     assert job.source is None
     settings = job.to_dict()
-    assert settings["model"]["file"][0].endswith("linear.toml")
+    assert settings["model"]["file"] == ["linear"]
+    # Without a job file, paths start at the out folder.
+    assert (settings["session"], settings["out"]) == ("../../session", ".")
     assert {name: settings[name] for name in ("seed", "columns", "window", "compare", "decode", "tests")} == {
         "seed": 0,
         "columns": {},
@@ -68,7 +70,7 @@ def test_a_bare_session_gets_the_defaults_of_the_interface(folder, monkeypatch):
             "min_gain": 0.05,
         },
         "decode": {"cutoffs_s": [0.1, 0.2, 0.3], "draws": 1000},
-        "tests": {"level": 0.05, "bootstrap": 0, "assignment": "free"},
+        "tests": {"level": 0.05, "bootstrap": 0, "assignment": "free", "unseen_conditions": False},
     }
     assert finite(settings) == settings
 
@@ -85,6 +87,9 @@ def test_every_key_is_read_and_paths_start_at_the_job_file(folder):
     assert (job.window.bin_s, job.window.before_set_s, job.tests.level) == (0.01, 0.3, 0.01)
     assert isinstance(job.window.min_rate_hz, float)
     assert isinstance(job.compare.min_gain, float)
+    settings = job.to_dict()
+    assert (settings["session"], settings["out"]) == ("session", "fits/myjob")
+    assert settings["model"]["file"] == ["linear", "models/mine.toml"]
 
 
 def test_out_on_the_command_line_starts_here(folder, monkeypatch, tmp_path_factory):
@@ -98,7 +103,7 @@ def test_several_sessions(folder):
     job = read_job(write(folder, 'session = ["session", "second.nwb"]'))
     assert job.sessions == (folder / "session", folder / "second.nwb")
     assert job.out == folder / "fits" / "job"
-    assert job.to_dict()["session"] == [str(path) for path in job.sessions]
+    assert job.to_dict()["session"] == ["session", "second.nwb"]
 
 
 def test_a_trailing_slash_does_not_change_the_name(folder, monkeypatch):

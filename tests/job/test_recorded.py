@@ -22,7 +22,7 @@ import pytest
 import portfire
 
 JOB = """\
-session = {folder}
+session = {folders}
 [window]
 before_set_s = 0.3
 [compare]
@@ -36,15 +36,15 @@ cutoffs_s = [0.0, 0.1, 0.2]
 @pytest.fixture(scope="module")
 def decoded(recordings, tmp_path_factory):
     """Rows of the decode of both sessions, by letter."""
+    here = tmp_path_factory.mktemp("recorded")
+    job = here / "job.toml"
+    folders = json.dumps([str(recordings / f"foreperiod-{letter}") for letter in "ab"])
+    job.write_text(JOB.format(folders=folders), encoding="utf-8")
+    portfire.run(job, out=here / "out", workers=2, quiet=True)
     found = {}
     for letter in "ab":
-        here = tmp_path_factory.mktemp(letter)
-        job = here / "job.toml"
-        job.write_text(
-            JOB.format(folder=json.dumps(str(recordings / f"foreperiod-{letter}"))), encoding="utf-8"
-        )
-        portfire.run(job, out=here / "out", workers=2, quiet=True)
-        result = json.loads((here / "out" / "result.json").read_text(encoding="utf-8"))
+        folder = here / "out" / f"foreperiod-{letter}"
+        result = json.loads((folder / "result.json").read_text(encoding="utf-8"))
         assert result["session"]["trials_used"] == 128
         assert result["chosen"]["latent_dim"] == 1
         found[letter] = [row for row in result["decode"] if row["variant"] == "all"]

@@ -255,7 +255,7 @@ def test_session_with_one_sample_interval_and_with_none(small: Write) -> None:
     page = read_page(small("one", samples=(0.6,), sources=("context", "trial")))
     assert "The sample interval was not tested: the session has one sample interval." in page.words
     page = read_page(small("bare", samples=(), contexts=(), sources=("trial",), target=False))
-    assert "The sample interval was not tested: the session has no sample intervals." in page.words
+    assert "The sample interval was not tested: the session has no sample_s column." in page.words
     assert "The session has no sample intervals and no contexts." in page.words
     assert page.tags.count("svg") == len(FIGURES)
 

@@ -5,7 +5,7 @@ import pytest
 
 from portfire.comparison import fold_of, training_rows
 from portfire.errors import PortfireError
-from portfire.timing import decode, find_running, round_cutoff
+from portfire.timing import decode, describe_limits, find_running, round_cutoff
 from portfire.timing._decoding import choose_shifts
 
 N_FOLDS = 5
@@ -139,18 +139,19 @@ def test_signal_is_found_and_interval_holds_it():
     assert row.null_draws == 160
     assert row.ci95[0] < 0.36 < row.ci95[1]
     assert row.null95[1] < row.r2_window
-    assert row.warnings == ()
+    assert describe_limits([row], 0.05) == ()
 
 
 def test_false_alarms_and_power():
     """200 sessions each: alarms within binomial bounds (two-sided 0.1 %) around 5 %."""
-    alarms = {"independent": 0, "drift": 0, "ended": 0}
+    alarms = {"independent": 0, "drift": 0, "ended": 0, "drift, ended": 0}
     for seed in range(200):
         x, produced, condition = draw(seed=seed)
         alarms["independent"] += run(x, produced, condition).p <= 0.05
         alarms["ended"] += run(x, produced, condition, float(np.quantile(produced, 0.2))).p <= 0.05
         x, produced, condition = draw(seed=seed, drift=0.5)
         alarms["drift"] += run(x, produced, condition).p <= 0.05
+        alarms["drift, ended"] += run(x, produced, condition, float(np.quantile(produced, 0.2))).p <= 0.05
     # scipy.stats.binom.ppf([0.0005, 0.9995], 200, 0.05) = 2, 22
     assert all(2 <= count <= 22 for count in alarms.values()), alarms
     found = 0
@@ -195,7 +196,10 @@ def test_too_few_shifts_are_said():
     row = run(x, produced, condition)
     assert row.null_draws == 16
     assert row.p >= 1 / 17
-    assert "only 16 distinct shifts, so p cannot fall below 0.059" in row.warnings[0]
+    assert describe_limits([row], 0.06) == ()
+    assert describe_limits([row], 0.05) == (
+        "Decode: too few distinct shifts for p to reach 0.05 at the cutoff 0.1 s (16 shifts of 40 trials).",
+    )
 
 
 def test_sparse_conditions_are_dropped_and_counted():
@@ -205,7 +209,9 @@ def test_sparse_conditions_are_dropped_and_counted():
     assert row.n_trials == 97
     assert row.n_used == 100
     assert not set(row.row) & {10, 40, 80}
-    assert "3 of 100 trials are not scored" in row.warnings[0]
+    (said,) = describe_limits([row], 0.05)
+    assert "not scored" in said
+    assert said.endswith("at the cutoff 0.1 s (3 of 100).")
 
 
 def test_cutoff_is_rounded_to_whole_bins():
@@ -227,6 +233,32 @@ def test_late_variant_uses_late_responses_only():
     assert row.to_row()["variant"] == "late"
 
 
+def test_late_responses_have_one_warning_that_names_the_cutoffs():
+    x, produced, condition = draw(n=100, n_conditions=1)
+    rows = [
+        row
+        for cutoff in (0.1, 0.4, 0.45)
+        for variant in ("all", "late")
+        for row in decode(
+            {"state": x, "counts": x[:, :1]},
+            produced,
+            condition,
+            index=np.arange(100),
+            n_session=100,
+            n_folds=N_FOLDS,
+            cutoff_s=cutoff,
+            bin_s=0.02,
+            variant=variant,
+        )
+    ]
+    used = {row.cutoff_s: row.n_used for row in rows if row.variant == "late"}
+    assert describe_limits(rows, 0.05) == (
+        "Decode of late responses (0.15 s or more after the cutoff): too few distinct shifts for p to reach "
+        f"0.05 at the cutoffs 0.4 s ({2 * (used[0.4] // 5)} shifts of {used[0.4]} trials) and 0.46 s "
+        f"({2 * (used[0.46] // 5)} shifts of {used[0.46]} trials).",
+    )
+
+
 def test_trials_without_response_are_left_aside():
     x, produced, condition = draw()
     produced[[3, 50]] = np.nan
@@ -240,7 +272,7 @@ def test_nobody_left_gives_an_empty_row():
     x, produced, condition = draw(n=40)
     row = run(x, produced, condition, 9.0)
     assert (row.running, row.n_trials, row.r2, row.ci95, row.p, row.null95) == (0, 0, None, None, None, None)
-    assert "0 trials allow only 0 distinct shifts" in row.warnings[0]
+    assert "at the cutoff 9 s (0 shifts of 0 trials)" in describe_limits([row], 0.05)[0]
     assert row.to_table([""] * 40).empty
 
 

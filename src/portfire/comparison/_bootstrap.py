@@ -13,7 +13,7 @@ from ..estimation import Efficient, Fit, Objective, draw_trials
 from ..inference import pack
 from ..session import Trials
 from ._cone import score_statistic
-from ._contrast import PROFILE_DROP
+from ._verdict import PROFILE_DROP
 
 _CHECK_SHARE = 0.05
 # Share of P00 below which a covariance has a direction with next to nothing in it.

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from ..estimation import Fit
+from ..estimation import Fit, kind_of
 
 
 def carrying_time_constant(fitted: Fit, source: str) -> float:
@@ -21,7 +21,8 @@ def carrying_time_constant(fitted: Fit, source: str) -> float:
     Returns
     -------
     float
-        Seconds; infinite where the mode does not decay. Complex pairs count as one mode.
+        Seconds; infinite where the mode does not decay. Complex pairs count as one mode. Where the
+        dynamics are not linear, they are taken about the mean initial state.
     """
     params, setup = fitted.params, fitted.setup
     if source == "trial":
@@ -29,7 +30,7 @@ def carrying_time_constant(fitted: Fit, source: str) -> float:
     else:
         wanted = [k for k, c in enumerate(setup.columns) if c.source == source and c.persistence_s == 0]
         push = params["push"][:, wanted]
-    values, vectors = np.linalg.eig(params["transition"])
+    values, vectors = np.linalg.eig(kind_of(setup).local_transition(params, setup))
     modes = np.linalg.solve(vectors, push.astype(complex))
     held = modes * (values**setup.n_reference)[:, None]
     readout = params["readout"] @ vectors

@@ -15,8 +15,6 @@ from ._boundary import expected_cost, likelihood_ratio_p
 from ._gain import gain, holm
 from ._verdict import Evidence, Verdict, judge
 
-# Half the 95 % quantile of χ²₁: a profile interval leaves out what is this much lower.
-PROFILE_DROP = 1.92
 _TAKEN = {"initial_unique": "sustained", "sustained_unique": "initial", "total": "none"}
 _PERSISTENCES = {"initial": 0.0, "sustained": float("inf")}
 
@@ -88,14 +86,6 @@ class Contrast:
     entries: dict[str, Entry]
     verdict: Verdict
     end_difference: float
-
-    def excludes_other_end(self) -> bool:
-        """Whether the persistence profile leaves out the end that the verdict does not name."""
-        if self.verdict.label == "sustained":
-            return self.end_difference > PROFILE_DROP
-        if self.verdict.label == "initial":
-            return -self.end_difference > PROFILE_DROP
-        return False
 
 
 def _count(full: Account, smaller: Account, source: str, setup: Setup) -> tuple[int, tuple[int, ...], int]:

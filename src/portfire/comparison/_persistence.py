@@ -14,7 +14,7 @@ from ..accounts import Account, push_kernel
 from ..dynamics import Setup, decay_of
 from ..errors import PortfireError
 from ..estimation import Fit, count_route
-from ._contrast import PROFILE_DROP
+from ._verdict import PROFILE_DROP
 
 PERSISTENCE_GRID_S = (0.0, 0.05, 0.1, 0.2, 0.4, 0.8, 1.6, float("inf"))
 # Nats by which one push must stay behind both before it is said that there are two.

@@ -26,6 +26,8 @@ Label = Literal["initial", "sustained", "both", "neither", "undetermined"]
 Status = Literal["needed", "not needed", "open"]
 
 MAX_TRIALS = 1_000_000
+# Half the 95 % quantile of χ²₁: a profile interval leaves out what is this much lower.
+PROFILE_DROP = 1.92
 
 _ROUTES_OF: dict[str, frozenset[str]] = {
     "initial": frozenset({"initial"}),
@@ -76,6 +78,8 @@ class Verdict:
         nothing is open or more trials would not settle it.
     words : str
         The verdict in one plain sentence.
+    needed : tuple of str
+        Routes that are needed, whatever the label.
     """
 
     source: str
@@ -83,6 +87,7 @@ class Verdict:
     open: tuple[str, ...]
     trials_to_close: int | None
     words: str
+    needed: tuple[str, ...] = ()
 
 
 def rate_route(evidence: Evidence, level: float, min_gain: float) -> Status:
@@ -183,14 +188,15 @@ def judge(
     if empty and not needed:
         return Verdict(source, "neither", (), None, say_neither(source, total.gain, min_gain))
     if not empty and len(needed) == 2:
-        return Verdict(source, "both", (), None, say_both(source, route))
+        return Verdict(source, "both", (), None, say_both(source, route), needed)
     if not empty and len(needed) == 1 and "open" not in status.values():
         other = PUSHES[1 - PUSHES.index(needed[0])]
         words = say_one(source, needed[0], other, route, min_gain)
-        return Verdict(source, "initial" if needed[0] == "initial" else "sustained", (), None, words)
+        label: Label = "initial" if needed[0] == "initial" else "sustained"
+        return Verdict(source, label, (), None, words, needed)
     if empty:
         words = say_disagreement(source, needed, min_gain)
-        return Verdict(source, "undetermined", needed, None, words)
+        return Verdict(source, "undetermined", needed, None, words, needed)
     undecided = tuple(name for name in PUSHES if status[name] == "open")
     if not undecided:
         n_needed = trials_to_close(total.gain, n_trials, min_gain)
@@ -200,16 +206,30 @@ def judge(
     known = [count for count in counts if count is not None]
     n_needed = max(known) if len(known) == len(counts) else None
     words = say_open(source, undecided, status, route, n_needed)
-    return Verdict(source, "undetermined", undecided, n_needed, words)
+    return Verdict(source, "undetermined", undecided, n_needed, words, needed)
 
 
 def reconcile(
-    verdict: Verdict, at_dims: Mapping[int, Verdict], latent_dim: int, persistence_excludes: bool = False
+    verdict: Verdict,
+    at_dims: Mapping[int, Verdict],
+    latent_dim: int,
+    ends_nats: Mapping[int, float] | None = None,
 ) -> Verdict:
     """Set a verdict beside those at other numbers of latent dimensions.
 
     An initial push in one spare mode that does not decay is a sustained push, so a verdict stands only if it
     is the same with one dimension more. Fewer dimensions are reported, and do not overrule.
+
+    One change is no contradiction. With a dimension to spare each route can stand in for the other, and
+    the unique gains of both may vanish although the push is there: the verdict at D + 1 is then
+    ``undetermined``. What is left to compare are the two ends of the persistence, the accounts with one push
+    alone, which have as many parameters. Where the end that the verdict does not name is worse by more than
+    half the 95 % quantile of χ² with one degree of freedom, it lies outside the profile interval of
+    the persistence, wherever its maximum is; if that holds at D and at D + 1, the verdict stands.
+
+    No other change is forgiven. ``both`` at D + 1, or the other route needed there, is evidence for a second
+    push, on which a comparison of single pushes has nothing to say; ``neither`` says that the larger model
+    does without the source; and the other single end contradicts the verdict outright.
 
     Parameters
     ----------
@@ -219,8 +239,9 @@ def reconcile(
         At other numbers of latent dimensions.
     latent_dim : int
         The chosen number D.
-    persistence_excludes : bool, default False
-        Whether the persistence interval excludes the other end at D and at D + 1; then the verdict stands.
+    ends_nats : mapping of int to float, optional
+        By number of latent dimensions, the log-likelihood of the account with the sustained push alone less
+        that with the initial push alone (nats, all trials).
 
     Returns
     -------
@@ -241,7 +262,7 @@ def reconcile(
     if above is None:
         note = f"; this was not checked with {latent_dim + 1} latent dimensions."
         return replace(verdict, words=verdict.words.removesuffix(".") + note)
-    if above.label == verdict.label or persistence_excludes:
+    if above.label == verdict.label or _only_faded(verdict, above, latent_dim, ends_nats or {}):
         return verdict
     if above.label == "undetermined":
         undecided = above.open or PUSHES
@@ -253,6 +274,16 @@ def reconcile(
         f"is {verdict.label}, with {latent_dim + 1} it is {above.label}."
     )
     return Verdict(verdict.source, "undetermined", undecided, None, words)
+
+
+def _only_faded(verdict: Verdict, above: Verdict, latent_dim: int, ends_nats: Mapping[int, float]) -> bool:
+    if above.label != "undetermined" or verdict.label not in PUSHES:
+        return False
+    if any(name != verdict.label for name in above.needed):
+        return False
+    sign = 1.0 if verdict.label == "sustained" else -1.0
+    ahead = (sign * ends_nats.get(dim, 0.0) for dim in (latent_dim, latent_dim + 1))
+    return all(nats > PROFILE_DROP for nats in ahead)
 
 
 def overrule(verdict: Verdict, reason: str) -> Verdict:

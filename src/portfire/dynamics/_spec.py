@@ -4,15 +4,16 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from pathlib import Path
 from typing import Any
 
 from portfire.dynamics._models import find_model
+from portfire.dynamics._settings import SETTINGS, read_settings
 from portfire.errors import InputError, nearest
 
 _CHOICES = {
-    ("model", "dynamics"): ("linear",),
+    ("model", "dynamics"): tuple(SETTINGS),
     ("model", "readout"): ("poisson", "gaussian"),
     ("drift", "use"): ("choose", "on", "off"),
 }
@@ -57,6 +58,8 @@ class ModelFile:
         Prior SD of the log rate's slow change, and its length scale as a share of the session.
     initial_noise_s : float
         Every account's initial state carries the noise that the dynamics accumulate in this time (s).
+    settings : frozen dataclass
+        What only this kind of dynamics has, of the class in `SETTINGS`; its defaults if not given.
     """
 
     name: str = "linear"
@@ -69,6 +72,14 @@ class ModelFile:
     drift_timescale: float = 0.2
     initial_noise_s: float = 0.3
     simulate: SimulateSettings = field(default_factory=SimulateSettings)
+    settings: Any = None
+
+    def __post_init__(self) -> None:
+        own = SETTINGS[self.dynamics]
+        if self.settings is None:
+            object.__setattr__(self, "settings", own())
+        elif not isinstance(self.settings, own):
+            raise ValueError(f"dynamics {self.dynamics!r} take {own.__name__}, received {self.settings!r}.")
 
 
 _KEYS = {
@@ -119,10 +130,13 @@ def model_from_dict(tables: Mapping[str, Any], name: str, where: str) -> ModelFi
     """Build a model from nested tables as they stand in a model file."""
     fields: dict[str, Any] = {"name": name}
     for table, content in tables.items():
-        if table not in _KEYS:
-            raise _unknown(where, table, list(_KEYS))
+        if table not in _KEYS and table not in SETTINGS:
+            raise _unknown(where, table, [*_KEYS, *SETTINGS])
         if not isinstance(content, Mapping):
             raise InputError(f"{where}: {table!r} should be a table, as [{table}].")
+    for table, content in tables.items():
+        if table in SETTINGS:
+            continue
         values = {}
         for key, value in content.items():
             if key not in _KEYS[table]:
@@ -132,6 +146,14 @@ def model_from_dict(tables: Mapping[str, Any], name: str, where: str) -> ModelFi
             fields["simulate"] = SimulateSettings(**values)
         else:
             fields.update(values)
+    kind = fields.get("dynamics", "linear")
+    for table in tables:
+        if table in SETTINGS and table != kind:
+            raise InputError(
+                f"{where}: [{table}] belongs to dynamics = {table!r}, but dynamics = {kind!r} here; change "
+                "one of them."
+            )
+    fields["settings"] = read_settings(kind, tables.get(kind, {}), where)
     return ModelFile(**fields)
 
 
@@ -165,4 +187,6 @@ def model_to_dict(model: ModelFile) -> dict[str, Any]:
     tables["simulate"] = {
         key: list(value) if isinstance(value, tuple) else value for key, value in vars(model.simulate).items()
     }
+    if own := asdict(model.settings):
+        tables[model.dynamics] = own
     return tables

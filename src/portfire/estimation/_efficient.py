@@ -16,7 +16,7 @@ from portfire.estimation._fit import Fit
 from portfire.estimation._freedom import free_parameters
 from portfire.estimation._objective import Objective, Values, to_device
 from portfire.estimation._scaling import Scaling, make_scaling
-from portfire.inference import laplace, laplace_scores, pack, start_path
+from portfire.inference import bound_scores, fit_bound, pack, start_guess
 from portfire.session import Trials
 
 Array = NDArray[np.float64]
@@ -91,7 +91,7 @@ class Efficient:
 def score_each(
     params: Values, setup: Setup, trials: Trials, rows: Mapping[int, float] | None = None
 ) -> Values:
-    """Gradient of each trial's Laplace log marginal likelihood, each parameter's shape plus (trial,).
+    """Gradient of each trial's bound on its log marginal likelihood, each parameter's shape plus (trial,).
 
     Parameters
     ----------
@@ -103,8 +103,8 @@ def score_each(
     for chunk in packed.chunks:
         for column, value in (rows or {}).items():
             chunk = chunk._replace(rows=chunk.rows.at[column].set(value))
-        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
-        parts.append(laplace_scores(device, setup, chunk, posterior))
+        bound = fit_bound(device, setup, chunk, start_guess(setup, chunk))
+        parts.append(bound_scores(device, setup, chunk, bound))
     return {
         name: np.moveaxis(packed.gather([np.asarray(part[name]) for part in parts]), 0, -1) for name in params
     }

@@ -14,8 +14,7 @@ import numpy as np
 from portfire.accounts import Account, Column
 from portfire.dynamics import ModelFile, Setup, make_setup, model_from_dict, model_to_dict, read_model
 from portfire.errors import InputError
-from portfire.estimation._ascent import find_maximum
-from portfire.estimation._gauge import canonical_map
+from portfire.estimation._kinds import kind_of
 from portfire.session import Trials
 
 if TYPE_CHECKING:
@@ -271,7 +270,7 @@ def fit(
     latent_dim : int, optional
         Latent dimensions D, at most the number of units; 3 by default, or those of ``start``.
     seed : int, default 0
-        Kept with the fit; scores hang on it.
+        Kept with the fit; scores hang on it, and the search where it is a random one.
     start : Fit, optional
         Start from this fit (of the same size and nuisance terms) instead of from the data.
     drift : bool, optional
@@ -312,12 +311,13 @@ def fit(
     setup = start.setup if start else make_setup(trials, spec, latent_dim, spec.drift != "off", n_reference)
     whole = Account.full(setup.sources) if account is None else Account.parse(account).restrict(setup.sources)
     params = start.params if start else None
-    found = find_maximum(trials, setup, whole, drift, params, tolerance, max_iterations)
+    search = kind_of(setup).search
+    found = search(trials, setup, whole, drift, params, tolerance, max_iterations, seed)
     return Fit(
         setup=setup,
         account=whole,
         params=found.params,
-        canonical=canonical_map(found.params["readout"], found.paths, found.packed),
+        canonical=found.canonical,
         value=found.value,
         trace=found.trace,
         status=found.status,

@@ -6,8 +6,8 @@ import numpy as np
 from scipy.special import expit
 
 from portfire.accounts import make_design
-from portfire.dynamics import spread_kernels
 from portfire.estimation._fit import Fit
+from portfire.estimation._kinds import kind_of
 from portfire.session import Trials
 
 
@@ -21,24 +21,7 @@ def draw_paths(fitted: Fit, rows: np.ndarray, n_time: int, rng: np.random.Genera
     n_time : int
         Bins after the set cue.
     """
-    setup, p = fitted.setup, fitted.params
-    d, noise = setup.latent_dim, float(p["noise"])
-    spread = spread_kernels(p, setup, n_time)
-    kernels, border = spread[:-1], spread[-1]
-    cov = np.zeros((d, d))
-    for _ in range(setup.initial_bins):
-        cov = p["transition"] @ cov @ p["transition"].T + noise * np.eye(d)
-    root = np.linalg.cholesky(cov + p["initial_factor"] @ p["initial_factor"].T)
-    own = rng.standard_normal((len(rows), d)) @ p["sustained_factor"].T
-    steady = p["offset"][:, None] + p["cue"] @ setup.cue_basis(n_time)
-    x = (rows * kernels[:, 0]) @ p["push"].T + border[0] * own + rng.standard_normal((len(rows), d)) @ root.T
-    path = np.empty((len(rows), n_time, d))
-    path[:, 0] = x
-    for t in range(1, n_time):
-        known = steady[:, t] + (rows * kernels[:, t]) @ p["push"].T + border[t] * own
-        x = x @ p["transition"].T + known + np.sqrt(noise) * rng.standard_normal((len(rows), d))
-        path[:, t] = x
-    return path
+    return kind_of(fitted.setup).draw_forward(fitted.params, fitted.setup, rows, n_time, rng).path
 
 
 def draw_ends(fitted: Fit, path: np.ndarray, rng: np.random.Generator) -> np.ndarray:

@@ -61,8 +61,8 @@ def project(params: dict[str, np.ndarray], freedom: Freedom) -> dict[str, np.nda
     }
 
 
-def count_route(account: Account, source: str, persistence_s: float, setup: Setup) -> int:
-    """Free parameters of one route of a source: D a column, or D(D+1)/2 for the trial source."""
+def count_additive_route(account: Account, source: str, persistence_s: float, setup: Setup) -> int:
+    """Free parameters of a route whose pushes add to the state: D a column, D(D+1)/2 for the trial source."""
     d = setup.latent_dim
     if not account.allows(source, persistence_s):
         return 0

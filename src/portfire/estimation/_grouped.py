@@ -21,7 +21,7 @@ from portfire.estimation._freedom import free_parameters, project
 from portfire.estimation._objective import Objective, Values, drift_penalty, n_threads, to_device
 from portfire.estimation._optimise import ascend
 from portfire.estimation._scaling import make_scaling
-from portfire.inference import Chunk, Packed, Path, laplace, laplace_gradient, pack, start_path
+from portfire.inference import Chunk, Guess, Packed, bound_gradient, fit_bound, pack, start_guess
 from portfire.session import Trials
 
 Array = NDArray[np.float64]
@@ -39,7 +39,7 @@ class GroupedFit:
     params : dict of arrays
         Common parameters, with ``extra``.
     value : float
-        Penalised Laplace log marginal likelihood (nats).
+        Penalised bound on the log marginal likelihood (nats).
     status : str
     """
 
@@ -85,26 +85,25 @@ class GroupedObjective:
         rows = make_design(trials).rows
         self.packs: list[Packed] = [pack(trials[group], setup) for group in groups]
         self.rows = [jnp.asarray(rows[group[0]]) for group in groups]
-        self.paths: list[list[Path]] = [[start_path(setup, c) for c in p.chunks] for p in self.packs]
+        self.guesses: list[list[Guess]] = [[start_guess(setup, c) for c in p.chunks] for p in self.packs]
         self._pool = ThreadPoolExecutor(n_threads())
 
     def __call__(self, params: Values, frame: Array | None = None) -> tuple[float, Values]:
-        """Penalised log marginal likelihood (nats) and its gradient by every common parameter."""
+        """Penalised bound (nats) and its gradient by every common parameter."""
         common = to_device(params)
         bent = [jax.vjp(lambda p, row=row: self.bend(p, row), common) for row in self.rows]
 
-        def one(task: tuple[int, Chunk, Path]) -> tuple[int, Path, float, Params]:
-            g, chunk, path = task
+        def one(task: tuple[int, Chunk, Guess]) -> tuple[int, Guess, float, Params]:
+            g, chunk, guess = task
             own = bent[g][0]
-            posterior = laplace(own, self.setup, chunk, path)
-            gradient, _, short = laplace_gradient(own, self.setup, chunk, posterior)
-            value = float((posterior.value + short) @ chunk.weight)
-            return g, posterior.mode, value, gradient
+            bound = fit_bound(own, self.setup, chunk, guess)
+            gradient = bound_gradient(own, self.setup, chunk, bound)
+            return g, bound.guess, float(bound.value @ chunk.weight), gradient
 
         tasks = [
-            (g, chunk, path)
+            (g, chunk, guess)
             for g, packed in enumerate(self.packs)
-            for chunk, path in zip(packed.chunks, self.paths[g], strict=True)
+            for chunk, guess in zip(packed.chunks, self.guesses[g], strict=True)
         ]
         done = list(self._pool.map(one, tasks))
         value = sum(part[2] for part in done)
@@ -116,7 +115,7 @@ class GroupedObjective:
             for name in gradient:
                 gradient[name] += np.asarray(pulled[name])
         if np.isfinite(value):
-            self.paths = [[part[1] for part in done if part[0] == g] for g in range(len(self.packs))]
+            self.guesses = [[part[1] for part in done if part[0] == g] for g in range(len(self.packs))]
         gradient["drift"] = gradient["drift"] - params["drift"]
         return value - drift_penalty(params), gradient
 

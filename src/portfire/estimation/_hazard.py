@@ -6,8 +6,8 @@ import numpy as np
 from scipy.special import expit
 
 from portfire.estimation._fit import Fit, Hazard
-from portfire.estimation._objective import to_device
-from portfire.inference import draw_deviations, lane_keys, laplace, pack, start_path
+from portfire.estimation._kinds import kind_of
+from portfire.inference import pack
 from portfire.session import Trials
 
 N_DRAWS = 8
@@ -23,12 +23,9 @@ def fit_hazard(fitted: Fit, trials: Trials) -> Hazard | None:
     if not np.isfinite(trials.produced_s).any():
         return None
     packed = pack(trials, setup)
-    device = to_device(fitted.params)
+    draws = kind_of(setup).draw_posterior(fitted.params, setup, packed, N_DRAWS, fitted.seed + 1)
     designs, events = [], []
-    for chunk, members in zip(packed.chunks, packed.members, strict=True):
-        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
-        deviations, _ = draw_deviations(posterior, lane_keys(fitted.seed + 1, chunk), N_DRAWS)
-        paths = np.asarray(posterior.mode.x)[:, :, None] + np.asarray(deviations)
+    for chunk, members, paths in zip(packed.chunks, packed.members, draws, strict=True):
         mask = np.asarray(chunk.mask)
         for lane, row in enumerate(members):
             last = before + int(mask[before:, lane].sum())

@@ -4,14 +4,13 @@ from __future__ import annotations
 
 from math import floor
 
-import jax.numpy as jnp
 import numpy as np
 import xarray as xr
 
 from portfire.errors import InputError
 from portfire.estimation._fit import Fit
-from portfire.estimation._objective import to_device
-from portfire.inference import laplace, pack, posterior_moments, start_path
+from portfire.estimation._kinds import kind_of
+from portfire.inference import pack
 from portfire.session import Trials
 
 
@@ -29,30 +28,15 @@ def causal_mask(trials: Trials, until_s: float | None) -> np.ndarray:
 
 def infer_trials(fitted: Fit, trials: Trials, until_s: float | None = None) -> xr.Dataset:
     """Canonical posterior means and covariances; see `Fit.infer`."""
-    setup, params = fitted.setup, fitted.params
+    setup = fitted.setup
     mask = causal_mask(trials, until_s)
-    packed = pack(trials, setup, mask)
-    device = to_device(params)
-    state, state_cov, e, e_cov = [], [], [], []
-    for chunk in packed.chunks:
-        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
-        moments = posterior_moments(posterior)
-        state.append(np.asarray(posterior.mode.x))
-        state_cov.append(np.asarray(moments.covariance))
-        e.append(np.asarray(posterior.mode.e))
-        e_cov.append(np.asarray(moments.border))
+    found = kind_of(setup).posterior(fitted.params, setup, pack(trials, setup, mask))
     to = fitted.canonical
-    x = packed.gather_time(state)
-    cov = packed.gather_time(state_cov)
-    rows = packed.gather([np.asarray(chunk.rows) for chunk in packed.chunks])
-    lasting = [k for k, column in enumerate(setup.columns) if column.persistence_s > 0]
-    lift = params["sustained_factor"]
-    sustained = rows[:, lasting] @ params["push"][:, lasting].T + packed.gather(e) @ lift.T
-    sustained_cov = lift @ packed.gather(e_cov) @ lift.T
     seen = mask.copy()
     seen[:, : setup.n_before] = True
     seen[:, setup.n_before] = True
-    x, cov = np.where(seen[..., None], x, np.nan), np.where(seen[..., None, None], cov, np.nan)
+    x = np.where(seen[..., None], found.state, np.nan)
+    cov = np.where(seen[..., None, None], found.state_cov, np.nan)
     at_cue = setup.n_before
     time = (np.arange(x.shape[1]) - at_cue) * setup.bin_s
     return xr.Dataset(
@@ -61,8 +45,9 @@ def infer_trials(fitted: Fit, trials: Trials, until_s: float | None = None) -> x
             "state_cov": (("trial", "time", "latent", "latent2"), to @ cov @ to.T),
             "initial": (("trial", "latent"), x[:, at_cue] @ to.T),
             "initial_cov": (("trial", "latent", "latent2"), to @ cov[:, at_cue] @ to.T),
-            "sustained": (("trial", "latent"), sustained @ to.T),
-            "sustained_cov": (("trial", "latent", "latent2"), to @ sustained_cov @ to.T),
+            "sustained": (("trial", "latent"), found.sustained @ to.T),
+            "sustained_cov": (("trial", "latent", "latent2"), to @ found.sustained_cov @ to.T),
+            **{name: (dims, _blank(dims, values, seen)) for name, (dims, values) in found.extra.items()},
         },
         coords={"trial": list(trials.trial), "time": time, "latent": np.arange(len(to))},
         attrs={
@@ -82,18 +67,13 @@ def causal_states(fitted: Fit, trials: Trials) -> np.ndarray:
     array, shape (trial, time, latent)
         NaN past the end of a trial.
     """
-    setup, before = fitted.setup, fitted.setup.n_before
-    packed = pack(trials, setup)
-    device = to_device(fitted.params)
-    states = []
-    for chunk in packed.chunks:
-        n_time = chunk.mask.shape[0]
-        path = start_path(setup, chunk)
-        state = np.full(path.x.shape, np.nan)
-        for t in range(before, n_time):
-            seen = chunk.mask * (jnp.arange(n_time)[:, None] <= t)
-            path = laplace(device, setup, chunk._replace(mask=seen, counts=chunk.counts * seen), path).mode
-            state[t] = np.asarray(path.x[t])
-        states.append(state)
-    x = packed.gather_time(states)[:, before:]
-    return np.where(trials.mask[:, before:, None], x, np.nan) @ fitted.canonical.T
+    setup = fitted.setup
+    x = kind_of(setup).causal_states(fitted.params, setup, pack(trials, setup))
+    return np.where(trials.mask[:, setup.n_before :, None], x, np.nan) @ fitted.canonical.T
+
+
+def _blank(dims: tuple[str, ...], values: np.ndarray, seen: np.ndarray) -> np.ndarray:
+    """Values with those of unseen bins blanked, where they go by trial and time."""
+    if dims[:2] != ("trial", "time"):
+        return values
+    return np.where(seen.reshape(*seen.shape, *(1,) * (values.ndim - 2)), values, np.nan)

@@ -1,4 +1,4 @@
-"""What is maximised: the Laplace log marginal likelihood of all counts, less the drift's prior."""
+"""What is maximised: the variational lower bound on the log marginal likelihood, less the drift's prior."""
 
 from __future__ import annotations
 
@@ -10,7 +10,18 @@ import jax.numpy as jnp
 import numpy as np
 
 from portfire.dynamics import Setup
-from portfire.inference import Chunk, Moments, Packed, Path, Posterior, laplace, laplace_gradient, start_path
+from portfire.inference import (
+    Bound,
+    Chunk,
+    Guess,
+    Moments,
+    Packed,
+    Path,
+    bound_gradient,
+    fit_bound,
+    start_guess,
+    turn_guess,
+)
 
 Values = dict[str, np.ndarray]
 
@@ -31,7 +42,7 @@ def drift_penalty(params: Values) -> float:
 
 
 class Objective:
-    """The objective on packed trials; it keeps each chunk's last mode as the next start.
+    """The objective on packed trials; it keeps each chunk's last posterior as the next start.
 
     Parameters
     ----------
@@ -41,7 +52,7 @@ class Objective:
 
     def __init__(self, packed: Packed, setup: Setup) -> None:
         self.packed, self.setup = packed, setup
-        self.paths = [start_path(setup, chunk) for chunk in packed.chunks]
+        self.guesses = [start_guess(setup, chunk) for chunk in packed.chunks]
         self.frame = np.eye(setup.latent_dim)
         self.last: list[tuple[Path, Moments]] = []
         self.n_calls = 0
@@ -49,44 +60,47 @@ class Objective:
         self.n_unconverged = 0
         self._pool = ThreadPoolExecutor(n_threads())
 
+    @property
+    def paths(self) -> list[Path]:
+        """Posterior means of the last call, chunk by chunk."""
+        return [guess.path for guess in self.guesses]
+
     def __call__(self, params: Values, frame: np.ndarray | None = None) -> tuple[float, Values]:
-        """Penalised log marginal likelihood (nats) and its gradient by every parameter.
+        """Penalised bound (nats) and its gradient by every parameter.
 
         Parameters
         ----------
         params : dict of arrays
         frame : array, shape (D, D), optional
-            Map by which the latent space was stretched; kept modes are carried from the last one's.
+            Map by which the latent space was stretched; kept posteriors are carried from the last one's.
         """
         device = to_device(params)
         frame = np.eye(self.setup.latent_dim) if frame is None else frame
         if np.any(frame != self.frame):
-            move = frame @ np.linalg.inv(self.frame)
-            self.paths = [Path(jnp.einsum("ij,tjb->tib", move, p.x), p.e) for p in self.paths]
+            move = jnp.asarray(frame @ np.linalg.inv(self.frame))
+            self.guesses = [turn_guess(guess, move) for guess in self.guesses]
             self.frame = frame
 
-        def one(task: tuple[Chunk, Path]) -> tuple[Posterior, tuple[dict, Moments, jax.Array]]:
-            posterior = laplace(device, self.setup, *task)
-            return posterior, jax.block_until_ready(laplace_gradient(device, self.setup, task[0], posterior))
+        def one(task: tuple[Chunk, Guess]) -> tuple[Bound, dict]:
+            bound = fit_bound(device, self.setup, *task)
+            return bound, jax.block_until_ready(bound_gradient(device, self.setup, task[0], bound))
 
-        results = list(self._pool.map(one, zip(self.packed.chunks, self.paths, strict=True)))
-        posteriors = [posterior for posterior, _ in results]
+        results = list(self._pool.map(one, zip(self.packed.chunks, self.guesses, strict=True)))
+        bounds = [bound for bound, _ in results]
         weights = [chunk.weight for chunk in self.packed.chunks]
-        value = sum(
-            float((p.value + short) @ w) for (p, (_, _, short)), w in zip(results, weights, strict=True)
-        )
+        value = sum(float(bound.value @ weight) for bound, weight in zip(bounds, weights, strict=True))
         gradient = {
-            name: sum((np.asarray(by[name]) for _, (by, _, _) in results), np.zeros(np.shape(params[name])))
+            name: sum((np.asarray(by[name]) for _, by in results), np.zeros(np.shape(params[name])))
             for name in params
         }
-        self.last = [(p.mode, moments) for p, (_, moments, _) in results]
+        self.last = [(bound.mean, bound.moments) for bound in bounds]
         if np.isfinite(value):
-            self.paths = [posterior.mode for posterior in posteriors]
+            self.guesses = [bound.guess for bound in bounds]
         self.n_calls += 1
-        self.n_sweeps += sum(int(posterior.sweeps) for posterior in posteriors)
+        self.n_sweeps += sum(int(bound.sweeps) for bound in bounds)
         self.n_unconverged = sum(
-            int(np.sum(~np.asarray(p.converged) & (np.asarray(w) > 0)))
-            for p, w in zip(posteriors, weights, strict=True)
+            int(np.sum(~np.asarray(bound.converged) & (np.asarray(weight) > 0)))
+            for bound, weight in zip(bounds, weights, strict=True)
         )
         gradient["drift"] = gradient["drift"] - params["drift"]
         return value - drift_penalty(params), gradient

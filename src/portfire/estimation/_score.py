@@ -2,50 +2,18 @@
 
 from __future__ import annotations
 
-from concurrent.futures import ThreadPoolExecutor
-
 import numpy as np
 import pandas as pd
 
 from portfire.estimation._fit import Fit
-from portfire.estimation._objective import n_threads, to_device
-from portfire.inference import (
-    Chunk,
-    Packed,
-    importance,
-    lane_keys,
-    laplace,
-    pack,
-    refine,
-    start_path,
-)
+from portfire.estimation._kinds import kind_of
+from portfire.inference import Packed, pack
 from portfire.session import Trials
 
-N_PAIRS, MORE_PAIRS = 16, 128
-LARGEST_SE = 0.05
 
-
-def sample_loglik(fitted: Fit, packed: Packed, n_pairs: int = N_PAIRS) -> tuple[np.ndarray, np.ndarray]:
-    """Importance-sampled log marginal likelihood and its standard error, shape (trial,) each.
-
-    Trials whose standard error is above 0.05 nats get eight times the draws; those whose effective
-    sample size then falls below 30 % are scored by the guided particle filter instead.
-    """
-    device, setup = to_device(fitted.params), fitted.setup
-
-    def one(chunk: Chunk) -> tuple[np.ndarray, np.ndarray]:
-        keys = lane_keys(fitted.seed, chunk)
-        posterior = laplace(device, setup, chunk, start_path(setup, chunk))
-        sampled = importance(device, setup, chunk, posterior, keys, n_pairs)
-        real = np.asarray(chunk.weight) > 0
-        if np.any((np.asarray(sampled.se) > LARGEST_SE) & real):
-            sampled = importance(device, setup, chunk, posterior, keys, MORE_PAIRS)
-        sampled, _ = refine(device, setup, chunk, posterior, keys, sampled)
-        return np.asarray(sampled.loglik), np.asarray(sampled.se)
-
-    with ThreadPoolExecutor(n_threads()) as pool:
-        results = list(pool.map(one, packed.chunks))
-    return packed.gather([r[0] for r in results]), packed.gather([r[1] for r in results])
+def sample_loglik(fitted: Fit, packed: Packed) -> tuple[np.ndarray, np.ndarray]:
+    """Log marginal likelihood of every trial and its Monte-Carlo standard error, shape (trial,) each."""
+    return kind_of(fitted.setup).loglik(fitted.params, fitted.setup, packed, fitted.seed)
 
 
 def score_trials(fitted: Fit, trials: Trials) -> pd.DataFrame:

@@ -32,17 +32,19 @@ class Factor(NamedTuple):
 
 def multiply(a: jax.Array, b: jax.Array) -> jax.Array:
     """A B for lanes of matrices, shapes (i, j, lane) and (j, k, lane)."""
-    out = a[:, 0, None] * b[None, 0]
-    for j in range(1, a.shape[1]):
-        out = out + a[:, j, None] * b[None, j]
-    return out
+    # Row by row: the compiler then keeps the factors instead of computing them anew for every entry.
+    return jnp.stack([_combine_rows(a[i], b) for i in range(a.shape[0])])
 
 
 def multiply_transposed(a: jax.Array, b: jax.Array) -> jax.Array:
     """Aᵀ B for lanes of matrices, shapes (j, i, lane) and (j, k, lane)."""
-    out = a[0, :, None] * b[0, None]
-    for j in range(1, a.shape[0]):
-        out = out + a[j, :, None] * b[j, None]
+    return jnp.stack([_combine_rows(a[:, i], b) for i in range(a.shape[1])])
+
+
+def _combine_rows(weights: jax.Array, rows: jax.Array) -> jax.Array:
+    out = weights[0] * rows[0]
+    for j in range(1, len(rows)):
+        out = out + weights[j] * rows[j]
     return out
 
 
@@ -54,49 +56,59 @@ def apply_over_time(a: jax.Array, b: jax.Array) -> jax.Array:
     return out
 
 
-def outer_over_time(a: jax.Array, b: jax.Array) -> jax.Array:
-    """A_t B_tᵀ for every bin, shapes (time, i, k, lane) and (time, j, k, lane)."""
-    out = a[:, :, None, 0] * b[:, None, :, 0]
-    for k in range(1, a.shape[2]):
-        out = out + a[:, :, None, k] * b[:, None, :, k]
-    return out
-
-
 def cholesky(matrix: jax.Array) -> tuple[list[jax.Array], list[jax.Array]]:
-    """Right-looking Cholesky: columns of L (each (D, lane)) and one over its diagonal."""
+    """Cholesky factor entry by entry: columns of L (each (D, lane)) and one over its diagonal."""
     d = matrix.shape[0]
-    columns, inverse = [], []
+    entries: list[list[jax.Array]] = [[] for _ in range(d)]
+    inverse: list[jax.Array] = []
     for j in range(d):
-        root = lax.rsqrt(matrix[j, j])
-        column = jnp.where((jnp.arange(d) >= j)[:, None], matrix[:, j] * root, 0.0)
-        columns.append(column)
-        inverse.append(root)
-        if j + 1 < d:
-            matrix = matrix - column[:, None] * column[None, :]
+        for i in range(j, d):
+            left = matrix[i, j]
+            for k in range(j):
+                left = left - entries[i][k] * entries[j][k]
+            if i == j:
+                inverse.append(lax.rsqrt(left))
+            entries[i].append(left * inverse[j])
+    zero = jnp.zeros_like(inverse[0])
+    columns = [jnp.stack([zero] * j + [entries[i][j] for i in range(j, d)]) for j in range(d)]
     return columns, inverse
 
 
 def solve_lower(columns: list[jax.Array], inverse: list[jax.Array], right: jax.Array) -> jax.Array:
     """L⁻¹ R, R of shape (D, k, lane)."""
-    rows = []
-    for j in range(len(columns)):
-        row = right[j] * inverse[j]
-        rows.append(row)
-        if j + 1 < len(columns):
-            right = right - columns[j][:, None] * row[None]
+    rows: list[jax.Array] = []
+    for i in range(len(columns)):
+        left = right[i]
+        for k in range(i):
+            left = left - columns[k][i] * rows[k]
+        rows.append(left * inverse[i])
     return jnp.stack(rows)
 
 
 def solve_upper(columns: list[jax.Array], inverse: list[jax.Array], right: jax.Array) -> jax.Array:
     """L⁻ᵀ R, R of shape (D, k, lane)."""
     d = len(columns)
-    rows: list[jax.Array] = [right[0]] * d
-    lower = jnp.stack(columns, axis=1)
-    for j in reversed(range(d)):
-        rows[j] = right[j] * inverse[j]
-        if j:
-            right = right - lower[j][:, None] * rows[j][None]
-    return jnp.stack(rows)
+    rows: list[jax.Array] = []
+    for i in reversed(range(d)):
+        left = right[i]
+        for k in range(i + 1, d):
+            left = left - columns[i][k] * rows[d - 1 - k]
+        rows.append(left * inverse[i])
+    return jnp.stack(rows[::-1])
+
+
+def _invert_lower(columns: list[jax.Array], inverse: list[jax.Array]) -> jax.Array:
+    """L⁻¹, shape (D, D, lane)."""
+    d = len(columns)
+    rows = [[jnp.zeros_like(inverse[0])] * d for _ in range(d)]
+    for j in range(d):
+        rows[j][j] = inverse[j]
+        for i in range(j + 1, d):
+            left = columns[j][i] * rows[j][j]
+            for k in range(j + 1, i):
+                left = left + columns[k][i] * rows[k][j]
+            rows[i][j] = -left * inverse[i]
+    return jnp.stack([jnp.stack(row) for row in rows])
 
 
 def _unstack(lower: jax.Array, inverse: jax.Array) -> tuple[list[jax.Array], list[jax.Array]]:
@@ -127,12 +139,12 @@ def factorise(diagonal: jax.Array, off: jax.Array, right: jax.Array) -> tuple[Fa
     ) -> tuple[tuple[jax.Array, jax.Array], tuple[jax.Array, ...]]:
         schur, done = carry
         h, o, r = block
-        columns, inverse = cholesky(h - schur)
-        solved = solve_lower(
-            columns, inverse, jnp.concatenate([jnp.broadcast_to(o, (d, d, n_lanes)), r - done], axis=1)
-        )
+        # Barriers keep the compiler from computing each factor anew for every entry that needs it.
+        columns, inverse = lax.optimization_barrier(cholesky(h - schur))
+        known = jnp.concatenate([jnp.broadcast_to(o, (d, d, n_lanes)), r - done], axis=1)
+        solved = lax.optimization_barrier(solve_lower(columns, inverse, known))
         coupling = solved[:, :d]
-        carried = multiply_transposed(coupling, solved)
+        carried = lax.optimization_barrier(multiply_transposed(coupling, solved))
         out = (jnp.stack(columns, axis=1), jnp.stack(inverse), coupling, solved[:, d:])
         return (carried[:, :d], carried[:, d:]), out
 
@@ -174,17 +186,25 @@ def invert_band(factor: Factor) -> tuple[jax.Array, jax.Array]:
         Block (t, t+1) of the inverse; the last is zero.
     """
     _, d, _, n_lanes = factor.lower.shape
-    identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
 
     def step(later: jax.Array, block: tuple[jax.Array, ...]) -> tuple[jax.Array, tuple[jax.Array, jax.Array]]:
         lower, inverse, coupling = block
-        columns, roots = _unstack(lower, inverse)
-        # Barriers keep the compiler from computing a product's factors anew for each of its entries.
-        half = lax.optimization_barrier(solve_lower(columns, roots, identity))
+        half = lax.optimization_barrier(_invert_lower(*_unstack(lower, inverse)))
         gain = lax.optimization_barrier(multiply_transposed(half, coupling))
         lag = lax.optimization_barrier(-multiply(gain, later))
-        cov = multiply_transposed(half, half) - multiply(lag, gain.transpose(1, 0, 2))
-        cov = 0.5 * (cov + cov.transpose(1, 0, 2))
+        entries = [[_entry(half, lag, gain, i, j) for j in range(i + 1)] for i in range(d)]
+        cov = jnp.stack([jnp.stack([entries[max(i, j)][min(i, j)] for j in range(d)]) for i in range(d)])
+        cov = lax.optimization_barrier(cov)
         return cov, (cov, lag)
 
     return lax.scan(step, jnp.zeros((d, d, n_lanes)), tuple(factor), reverse=True)[1]
+
+
+def _entry(half: jax.Array, lag: jax.Array, gain: jax.Array, i: int, j: int) -> jax.Array:
+    """Entry (i, j), i ≥ j, of HᵀH - lag gainᵀ with H lower triangular."""
+    out = half[i, i] * half[i, j]
+    for k in range(i + 1, len(half)):
+        out = out + half[k, i] * half[k, j]
+    for k in range(len(half)):
+        out = out - lag[i, k] * gain[j, k]
+    return out

@@ -21,5 +21,5 @@ def configure() -> None:
     jax.config.update("jax_enable_x64", True)
     if jax.config.values["jax_compilation_cache_dir"] is None:
         jax.config.update("jax_compilation_cache_dir", str(cache_folder() / "compiled"))
-        jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.2)
+        jax.config.update("jax_persistent_cache_min_compile_time_secs", 0.0)
         jax.config.update("jax_persistent_cache_min_entry_size_bytes", 0)

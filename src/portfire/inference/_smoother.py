@@ -22,7 +22,8 @@ from portfire.inference._chain import (
     cholesky,
     factorise,
     invert_band,
-    outer_over_time,
+    multiply,
+    multiply_transposed,
     solve_lower,
     solve_upper,
     substitute_backward,
@@ -32,6 +33,8 @@ from portfire.inference._chunk import Chunk
 
 DECREMENT_TOLERANCE = 1e-6
 MAX_SWEEPS = 60
+# Added to the log rate where nothing was observed.
+_NEVER = -1e3
 
 
 class Path(NamedTuple):
@@ -103,13 +106,24 @@ class Moments(NamedTuple):
 
 
 class _Data(NamedTuple):
-    """What a chunk's counts contribute whatever the path: CᵀY, unit totals, unit offsets, GEMM stack."""
+    """What a chunk contributes whatever the path.
+
+    ``pulled`` is CᵀY, ``linear_offset`` what the counts times the offsets add to each lane's
+    log-likelihood. ``plane`` and ``rest`` make η one product: η = plane @ [x; rest], with a constant, the
+    drift basis and, for counts, a row that sends rates to zero where nothing was observed.
+    """
 
     pulled: jax.Array
-    totals: jax.Array
+    linear_offset: jax.Array
     offset: jax.Array
+    plane: jax.Array
+    rest: jax.Array
     stack: jax.Array
     pairs: np.ndarray
+
+    def rows(self, x: jax.Array) -> jax.Array:
+        """[x; rest], shape (D + …, time·lane), of a path (time, D, lane)."""
+        return jnp.concatenate([x.transpose(1, 0, 2).reshape(x.shape[1], -1), self.rest])
 
 
 def pair_index(d: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -125,9 +139,21 @@ def _prepare(params: Params, setup: Setup, chunk: Chunk) -> _Data:
     n, n_time, n_lanes = chunk.counts.shape
     pulled = (c.T @ chunk.counts.reshape(n, -1)).reshape(-1, n_time, n_lanes).transpose(1, 0, 2)
     offset = params["log_rate"][:, None] + params["drift"] @ chunk.drift
+    level, columns, rows = params["log_rate"], [params["drift"]], [_over_time(chunk.drift, n_time)]
+    if setup.model.readout == "poisson":
+        level = level + jnp.log(setup.bin_s)
+        columns.append(jnp.ones((n, 1)))
+        rows.append(jnp.where(chunk.mask > 0, 0.0, _NEVER)[None])
+    plane = jnp.concatenate([c, level[:, None], *columns], axis=1)
+    rest = jnp.concatenate([jnp.ones((1, n_time, n_lanes)), *rows]).reshape(-1, n_time * n_lanes)
     i, j, table = pair_index(setup.latent_dim)
     stack = jnp.concatenate([jnp.ones((1, n)), c.T, (c[:, i] * c[:, j]).T])
-    return _Data(pulled, chunk.counts.sum(axis=1), offset, stack, table)
+    totals = jnp.sum(chunk.counts.sum(axis=1) * offset, axis=0)
+    return _Data(pulled, totals, offset, plane, rest, stack, table)
+
+
+def _over_time(rows: jax.Array, n_time: int) -> jax.Array:
+    return jnp.broadcast_to(rows[:, None], (rows.shape[0], n_time, rows.shape[1]))
 
 
 def log_rates(params: Params, offset: jax.Array, x: jax.Array) -> jax.Array:
@@ -143,15 +169,14 @@ def _data_terms(
     """Log-likelihood (lane,), its gradient (time, D, lane) and minus its Hessian (time, D, D, lane)."""
     d = setup.latent_dim
     n_time, _, n_lanes = x.shape
-    eta = log_rates(params, data.offset, x)
     if setup.model.readout == "poisson":
-        mean = setup.bin_s * jnp.exp(eta) * chunk.mask
-        sums = (data.stack @ mean.reshape(mean.shape[0], -1)).reshape(-1, n_time, n_lanes)
-        linear = jnp.sum(data.pulled * x, axis=(0, 1)) + jnp.sum(data.totals * data.offset, axis=0)
+        sums = (data.stack @ jnp.exp(data.plane @ data.rows(x))).reshape(-1, n_time, n_lanes)
+        linear = jnp.sum(data.pulled * x, axis=(0, 1)) + data.linear_offset
         value = linear - jnp.sum(sums[0], axis=0)
         gradient = data.pulled - sums[1 : 1 + d].transpose(1, 0, 2)
         folded = sums[1 + d :]
     else:
+        eta = log_rates(params, data.offset, x)
         curvature = READOUTS[setup.model.readout].evaluate(params, chunk.counts, eta, setup.bin_s)
         value = jnp.sum(curvature.value * chunk.mask, axis=(0, 1))
         score = (curvature.score * chunk.mask).reshape(eta.shape[0], -1)
@@ -214,10 +239,17 @@ def _prior_terms(
     return value, gradient, by_border
 
 
-def _complement(blocks: _PriorBlocks, border_solution: jax.Array) -> Corner:
-    schur = blocks.corner[:, :, None] - jnp.einsum("tij,tikb->jkb", blocks.border, border_solution)
-    columns, inverse = cholesky(0.5 * (schur + schur.transpose(1, 0, 2)))
-    return Corner(jnp.stack(columns, axis=1), jnp.stack(inverse))
+def _complement(blocks: _PriorBlocks, border: jax.Array, forward: jax.Array) -> tuple[Corner, jax.Array]:
+    """The border's Schur complement, and BᵀF for B = L⁻¹Hxe and F the forward-solved gradient (D, lane)."""
+    d = border.shape[1]
+    joint = jnp.concatenate([border, forward[:, :, None]], axis=2)
+
+    def add(total: jax.Array, now: jax.Array) -> tuple[jax.Array, None]:
+        return total + multiply_transposed(now[:, :d], now), None
+
+    total, _ = lax.scan(add, jnp.zeros((d, d + 1, border.shape[-1])), joint)
+    columns, inverse = cholesky(blocks.corner[:, :, None] - total[:, :d])
+    return Corner(jnp.stack(columns, axis=1), jnp.stack(inverse)), total[:, d]
 
 
 def solve_corner(corner: Corner, right: jax.Array) -> jax.Array:
@@ -241,23 +273,24 @@ def _combine(
 
 
 class _Step(NamedTuple):
-    """A Newton step, and the factors it came from."""
+    """A Newton step, and the factors it came from; ``border`` is L⁻¹ Hxe."""
 
     direction: Path
     factor: Factor
-    border_solution: jax.Array
+    border: jax.Array
     corner: Corner
 
 
 def _newton_step(blocks: _PriorBlocks, hessian: jax.Array, slack: Path) -> _Step:
     border = jnp.broadcast_to(blocks.border[..., None], (*blocks.border.shape, slack.x.shape[-1]))
     right = jnp.concatenate([slack.x[:, :, None], border], axis=2)
-    factor, forward = factorise(blocks.diagonal[..., None] + hessian, blocks.off[..., None], right)
-    solution = substitute_backward(factor, forward)
-    border_solution = solution[:, :, 1:]
-    corner = _complement(blocks, border_solution)
-    direction = _combine(blocks, border_solution, corner, solution[:, :, 0], slack.e)
-    return _Step(direction, factor, border_solution, corner)
+    factor, solved = factorise(blocks.diagonal[..., None] + hessian, blocks.off[..., None], right)
+    forward, border = solved[:, :, 0], solved[:, :, 1:]
+    corner, pulled = _complement(blocks, border, forward)
+    e = solve_corner(corner, (slack.e - pulled)[:, None])[:, 0]
+    # Only the gradient is carried backwards: the border's share of it is taken off before.
+    x = substitute_backward(factor, (forward - apply_over_time(border, e))[:, :, None])[:, :, 0]
+    return _Step(Path(x, e), factor, border, corner)
 
 
 @partial(jax.jit, static_argnames=("setup",))
@@ -367,7 +400,7 @@ def laplace(
         end.slack,
         left,
         step.factor,
-        step.border_solution,
+        substitute_backward(step.factor, step.border),
         step.corner,
     )
 
@@ -385,37 +418,46 @@ class _Search(NamedTuple):
     step: _Step
 
 
-def _moments(posterior: Posterior) -> Moments:
-    d, n_lanes = posterior.mode.e.shape
-    cov, lag = invert_band(posterior.factor)
+def _moments(factor: Factor, border_solution: jax.Array, corner: Corner) -> Moments:
+    d, n_lanes = corner.inverse_diagonal.shape
+    cov, lag = invert_band(factor)
     identity = jnp.broadcast_to(jnp.eye(d)[:, :, None], (d, d, n_lanes))
-    border = solve_corner(posterior.corner, identity)
-    v = posterior.border_solution
-    cross = jax.lax.optimization_barrier(-apply_over_time(v, border))
-    cov = cov - outer_over_time(cross, v)
-    lag = lag.at[:-1].add(-outer_over_time(cross[:-1], v[1:]))
+    border = solve_corner(corner, identity)
+
+    def add(later: jax.Array, now: tuple[jax.Array, ...]) -> tuple[jax.Array, tuple[jax.Array, ...]]:
+        v, own, next_ = now
+        cross = lax.optimization_barrier(-multiply(v, border))
+        turned = lax.optimization_barrier((v.transpose(1, 0, 2), later.transpose(1, 0, 2)))
+        outer, ahead = multiply(cross, turned[0]), multiply(cross, turned[1])
+        return v, (own - outer, next_ - ahead, cross)
+
+    start = jnp.zeros((d, d, n_lanes))
+    cov, lag, cross = lax.scan(add, start, (border_solution, cov, lag), reverse=True)[1]
     return Moments(cov, lag, cross, border)
 
 
 @jax.jit
 def posterior_moments(posterior: Posterior) -> Moments:
     """Covariances of a Laplace posterior."""
-    return _moments(posterior)
+    return _moments(posterior.factor, posterior.border_solution, posterior.corner)
 
 
 def _prior_surrogate(
-    params: Params, setup: Setup, chunk: Chunk, mode: Path, moments: Moments, lean: Path
+    params: Params, setup: Setup, chunk: Chunk, mode: Path, moments: Moments, lean: Path | None = None
 ) -> jax.Array:
     """A function whose gradient by the parameters is the prior's part of the objective's gradient."""
     n_time, before = chunk.mask.shape[0], setup.n_before
     prior = path_prior(params, setup, n_time)
     inputs = path_inputs(params, setup, n_time, chunk.rows)
     step, anchor = _residuals(prior, inputs, before, mode)
-    turn, turn_anchor = _residuals(prior, jnp.zeros_like(inputs), before, lean)
     weight = chunk.weight
-    energy = jnp.sum(step * (0.5 * step + turn), axis=1) @ weight
     held = prior.anchor_precision @ anchor
-    total = -energy @ prior.precision - jnp.sum(held * (0.5 * anchor + turn_anchor), axis=0) @ weight
+    leaning, leaning_anchor = 0.5 * step, 0.5 * anchor
+    if lean is not None:
+        turn, turn_anchor = _residuals(prior, jnp.zeros_like(inputs), before, lean)
+        leaning, leaning_anchor = leaning + turn, leaning_anchor + turn_anchor
+    total = -(jnp.sum(step * leaning, axis=1) @ weight) @ prior.precision
+    total = total - jnp.sum(held * leaning_anchor, axis=0) @ weight
     total = total + jnp.sum(weight) * prior.log_normaliser
     now = moments.covariance @ weight
     lag = moments.lag_one[:-1] @ weight
@@ -451,7 +493,7 @@ def laplace_gradient(
         From `laplace` with the same parameters.
     """
     data, _, _, blocks = _begin(params, setup, chunk)
-    moments = _moments(posterior)
+    moments = _moments(posterior.factor, posterior.border_solution, posterior.corner)
     d = setup.latent_dim
     x = posterior.mode.x
     n_time, _, n_lanes = x.shape

@@ -16,7 +16,7 @@ from portfire.dynamics import ModelFile
 from portfire.job._atomic import write_dataset_atomic, write_json_atomic, write_table_atomic
 from portfire.job._evidence import Evidences
 from portfire.job._findings import Findings
-from portfire.job._lasting import list_rivals_of
+from portfire.job._lasting import describe_yardsticks, list_rivals_of, list_unseen
 from portfire.job._result import RESULT
 from portfire.job._stages import ALL, Size
 from portfire.job._store import Store
@@ -71,7 +71,9 @@ def write_outputs(
         "rivals": [
             row for source in findings.job.compare.sources for row in list_rivals_of(findings, store, source)
         ],
-        "checks": store.read_meta(findings.checks)["checks"] if findings.checks else [],
+        "yardsticks": describe_yardsticks(findings, store),
+        "unseen_conditions": list_unseen(findings, store),
+        "checks": store.read_meta(findings.tested.checks)["checks"] if findings.tested.checks else [],
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),
         "versions": library_versions(),
@@ -137,7 +139,7 @@ def _other_models(findings: Findings, store: Store) -> list[pd.DataFrame]:
 
 
 def _absent_checks(findings: Findings, store: Store) -> list[str]:
-    absent = store.read_meta(findings.checks)["absent"] if findings.checks else None
+    absent = store.read_meta(findings.tested.checks)["absent"] if findings.tested.checks else None
     return [] if absent is None else [f"No predictive checks: {absent}."]
 
 

@@ -85,7 +85,7 @@ def _drawn(findings: Findings, store: Store) -> dict[tuple[str, str], float]:
     """Bootstrap p of every entry that has one; it takes the place of that of the likelihood ratio."""
     return {
         (source, name): float(tests["bootstrap"]["p"])
-        for source, key in findings.routes.items()
+        for source, key in findings.tested.routes.items()
         for name, tests in store.read_meta(key).items()
         if name in ("initial_unique", "sustained_unique", "total") and "bootstrap" in tests
     }
@@ -171,16 +171,15 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
     at_dims: dict[int, Verdict] = {
         best.latent_dim + shift: found.verdict for shift, found in by_shift.items() if shift
     }
-    above = by_shift.get(1)
-    excludes = here.excludes_other_end() and above is not None and _agrees_in_profile(here, above)
-    verdict = reconcile(here.verdict, at_dims, best.latent_dim, excludes)
-    mimic, time_constant = _look_for_mimic(findings, store, source, here, above)
+    ends_nats = {best.latent_dim + shift: found.end_difference for shift, found in sorted(by_shift.items())}
+    verdict = reconcile(here.verdict, at_dims, best.latent_dim, ends_nats)
+    mimic, time_constant = _look_for_mimic(findings, store, source, here, by_shift.get(1))
     confounded = _confounding(findings) if source == "context" else None
     if confounded is not None and confounded > CONFOUNDED:
         verdict = overrule(
             verdict, f"context is confounded with drift, since trial time explains {confounded:.0%} of it"
         )
-    failed = store.read_meta(findings.checks)["failed"] if findings.checks else None
+    failed = store.read_meta(findings.tested.checks)["failed"] if findings.tested.checks else None
     if failed is not None and verdict.label != "undetermined":
         verdict = overrule(verdict, failed)
     row: dict[str, Any] = {"source": source, **here.scores}
@@ -202,9 +201,7 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         },
         "gain_k": {name: entry.cost for name, entry in here.entries.items()},
         "at_dims": {str(d): v.label for d, v in sorted(at_dims.items())},
-        "ends_nats": {
-            str(best.latent_dim + shift): found.end_difference for shift, found in sorted(by_shift.items())
-        },
+        "ends_nats": {str(d): nats for d, nats in ends_nats.items()},
         "mimic": mimic,
         "carrying_mode": time_constant,
     }
@@ -216,19 +213,13 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
             row["words"] += (
                 f" But {row['rival']} describes these data better than the pushes of this verdict."
             )
-    if source in findings.routes:
-        row["tests"] = store.read_meta(findings.routes[source])
+    if source in findings.tested.routes:
+        row["tests"] = store.read_meta(findings.tested.routes[source])
     if source == "context":
         row["time_r2"] = confounded
     if verdict.label == "undetermined":
         row["open"] = list(verdict.open)
     return row
-
-
-def _agrees_in_profile(here: Contrast, above: Contrast) -> bool:
-    """Whether one dimension more leaves out the same end of the persistence."""
-    difference = above.end_difference if here.verdict.label == "sustained" else -above.end_difference
-    return difference > 1.92
 
 
 def _look_for_mimic(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import os
 import tomllib
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
@@ -88,11 +89,14 @@ class Tests:
         Sessions drawn at most for each p of the contrasts; 0: none are drawn.
     assignment : {"free", "blocked", "sequence"}
         How the task dealt intervals and contexts to trials.
+    unseen_conditions : bool
+        Whether every condition is predicted from the others.
     """
 
     level: float
     bootstrap: int = 0
     assignment: str = "free"
+    unseen_conditions: bool = False
 
 
 @dataclass(frozen=True)
@@ -127,16 +131,22 @@ class Job:
     source: Path | None = None
 
     def to_dict(self) -> dict[str, Any]:
-        """Return the job as plain values, laid out as a job file is."""
-        sessions = [str(path) for path in self.sessions]
+        """Return the job as plain values, laid out as a job file is.
+
+        Paths start at the job file's folder, as in a job file, or at the out folder where there is no job
+        file; models that the package ships go by their names.
+        """
+        base = self.out if self.source is None else self.source.absolute().parent
+        sessions = [_relative(path, base) for path in self.sessions]
+        models = [_shipped_name(path) or _relative(path, base) for path in self.model.files]
         plain: dict[str, Any] = finite(
             {
                 "session": sessions[0] if len(sessions) == 1 else sessions,
-                "out": self.out,
+                "out": _relative(self.out, base),
                 "seed": self.seed,
                 "columns": dict(self.columns),
                 "window": asdict(self.window),
-                "model": {"file": self.model.files},
+                "model": {"file": models},
                 "compare": asdict(self.compare),
                 "decode": asdict(self.decode),
                 "tests": asdict(self.tests),
@@ -322,6 +332,19 @@ def _check_cutoffs(window: Window, decode: Decode, where: str) -> None:
                 f"{where}: [decode] cutoffs_s has {decode.cutoffs_s[bins.index(n_bins)]:g} and {cutoff:g}, "
                 f"which are the same in whole bins of {window.bin_s:g} s; leave one out"
             )
+
+
+def _relative(path: Path, base: Path) -> str:
+    try:
+        return Path(os.path.relpath(path, base)).as_posix()
+    except ValueError:  # another drive
+        return path.as_posix()
+
+
+def _shipped_name(path: Path) -> str | None:
+    from portfire.dynamics import find_model, shipped_models
+
+    return path.stem if path.stem in shipped_models() and find_model(path.stem) == path else None
 
 
 def _count_bins(seconds: float, bin_s: float) -> int:

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 from portfire.job._file import Job
 from portfire.job._stages import Sizes
+from portfire.job._tested import Tested
 from portfire.session import Trials
 from portfire.timing import Decoding
 
@@ -27,14 +27,8 @@ class Findings:
     describe, causal : str, tuple of str
         Keys of the described fit and of the causal states.
     warnings, not_run : tuple of str
-    profiles : mapping of (int, str) to str
-        Key of the persistence profile by shift of the size and source.
-    routes : mapping of str to str
-        Key of the tests of a source's routes.
-    rivals : mapping of str to str
-        Key of the rivals of a source's pushes.
-    checks : str
-        Key of the predictive checks; empty where there are none.
+    tested : Tested
+        Keys of tests, rivals and checks.
     """
 
     job: Job
@@ -46,7 +40,4 @@ class Findings:
     causal: tuple[str, ...]
     warnings: tuple[str, ...]
     not_run: tuple[str, ...]
-    profiles: Mapping[tuple[int, str], str] = field(default_factory=dict)
-    routes: Mapping[str, str] = field(default_factory=dict)
-    rivals: Mapping[str, str] = field(default_factory=dict)
-    checks: str = ""
+    tested: Tested = field(default_factory=Tested)

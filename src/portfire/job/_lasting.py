@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 
+from portfire.comparison import UnseenCondition, compare_unseen, condition_rate_by_unit, null_by_unit
 from portfire.job._findings import Findings
 from portfire.job._stages import ALL
 from portfire.job._store import Store
@@ -13,7 +14,9 @@ from portfire.job._store import Store
 
 def describe_persistence(findings: Findings, store: Store, source: str) -> dict[str, Any]:
     """Keys of a contrast's row on the persistence of its source's push; empty where it was not profiled."""
-    by_shift = {shift: store.read_meta(key) for (shift, of), key in findings.profiles.items() if of == source}
+    by_shift = {
+        shift: store.read_meta(key) for (shift, of), key in findings.tested.profiles.items() if of == source
+    }
     if 0 not in by_shift:
         return {}
     here = by_shift[0]
@@ -86,9 +89,9 @@ def _overlap(first: list[float | None], second: list[float | None]) -> bool:
 
 def list_rivals_of(findings: Findings, store: Store, source: str) -> list[dict[str, Any]]:
     """Rows of the result on the rivals of one source's pushes."""
-    if source not in findings.rivals:
+    if source not in findings.tested.rivals:
         return []
-    rows: list[dict[str, Any]] = store.read_meta(findings.rivals[source])["rivals"]
+    rows: list[dict[str, Any]] = store.read_meta(findings.tested.rivals[source])["rivals"]
     return rows
 
 
@@ -96,3 +99,47 @@ def name_rival(rows: list[dict[str, Any]], verdict: str) -> str | None:
     """The rival that beats a verdict by most; None where none does."""
     better = [row for row in rows if verdict in row.get("beats", [])]
     return max(better, key=lambda row: row["ahead_nats"][verdict])["rival"] if better else None
+
+
+def describe_yardsticks(findings: Findings, store: Store) -> dict[str, Any] | None:
+    """Bits a spike by the condition's mean rate, and of units predicted from the others; None without."""
+    if not findings.tested.yardsticks:
+        return None
+    trials, folds = findings.trials, findings.job.compare.folds
+    null, rate = null_by_unit(trials, folds), condition_rate_by_unit(trials, folds)
+    n_spikes = trials.counts[:, trials.n_before :].sum()
+    unseen = np.zeros(len(trials))
+    for key in findings.tested.yardsticks:
+        arrays = store.read(key)[1]
+        unseen[arrays["rows"]] = arrays["loglik"].sum(axis=1)
+
+    def bits(above: np.ndarray) -> float:
+        return float(above.sum() / (n_spikes * np.log(2)))
+
+    return {
+        "condition_rate_bits_per_spike": bits(rate - null),
+        "unseen_units_bits_per_spike": bits(unseen - null.sum(axis=1)),
+        "unseen_units_groups": len(store.read_meta(findings.tested.yardsticks[0])["groups"]),
+    }
+
+
+def list_unseen(findings: Findings, store: Store) -> list[dict[str, Any]]:
+    """A row an account: its scores of conditions that its fit never saw."""
+    found = []
+    for condition, key in sorted(findings.tested.unseen.items()):
+        content, arrays = store.read(key)
+        loglik = {account: arrays[f"loglik_{k}"] for k, account in enumerate(content["accounts"])}
+        found.append(UnseenCondition(condition, arrays["rows"], loglik))
+    if not found:
+        return []
+    rows: list[dict[str, Any]] = compare_unseen(found, next(iter(found[0].loglik)))
+    for row in rows:
+        row["by_condition"] = [
+            {
+                "condition": one.condition,
+                "n": len(one.rows),
+                "loglik_per_trial": float(one.loglik[row["account"]].mean()),
+            }
+            for one in found
+        ]
+    return rows

@@ -15,10 +15,11 @@ from portfire.job._evidence import collect_contrasts
 from portfire.job._file import Job, check_job, session_name
 from portfire.job._findings import Findings
 from portfire.job._shared import write_trials
-from portfire.job._stages import ALL, Size, Sizes, Stages
+from portfire.job._stages import ALL, Sizes, Stages, shifted
+from portfire.job._tested import run_tests
 from portfire.job._workspace import Workspace
 from portfire.session import Trials, read_session
-from portfire.timing import Decoding, decode, round_cutoff
+from portfire.timing import Decoding, decode, describe_limits, round_cutoff
 
 N_PARTS = 4
 
@@ -59,35 +60,22 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     job = replace(job, compare=replace(job.compare, sources=present))
     stages = replace(stages, job=job)
     ladders = _run_ladders(stages, sizes)
-    profiles, routes, rivals, checks = _run_tests(stages, sizes, ladders)
+    tested = run_tests(stages, sizes, ladders)
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
-        f"The source {source} is not contrasted: the session has "
-        f"{'one sample interval' if source == 'interval' else 'one context'}."
+        f"The source {source} is not contrasted: the session has {_explain_absent(trials, source)}."
         for source in absent
     ]
     if not present:
-        not_run.append("No contrasts: the job names no source that this session has.")
+        not_run.append(f"No contrasts: the job names no source{' that this session has' if absent else ''}.")
     if not decodings:
-        not_run.append("No decode: no trial has a response, or the job names no cutoff.")
-    if present and not job.tests.bootstrap:
-        not_run.append("No bootstrap of the contrasts: the job asks for no draws ([tests] bootstrap).")
-    warnings = [text for found in decodings for text in found.warnings]
+        why = "no trial has a response" if job.decode.cutoffs_s else "the job names no cutoff"
+        not_run.append(f"No decode: {why}.")
+    warnings = describe_limits(decodings, job.tests.level)
+    not_run += tested.not_run
     findings = Findings(
-        job,
-        trials,
-        sizes,
-        ladders,
-        decodings,
-        describe,
-        causal,
-        tuple(warnings),
-        tuple(not_run),
-        profiles,
-        routes,
-        rivals,
-        checks,
+        job, trials, sizes, ladders, decodings, describe, causal, warnings, tuple(not_run), tested
     )
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
@@ -114,10 +102,11 @@ def _present_sources(trials: Trials, wanted: Sequence[str]) -> tuple[tuple[str, 
     return present, tuple(source for source in wanted if not has[source])
 
 
-def shifted(size: Size, shift: int, n_units: int) -> Size | None:
-    """The size with one latent dimension more or fewer; None where there is no such model."""
-    d = size.latent_dim + shift
-    return replace(size, latent_dim=d) if 1 <= d <= n_units else None
+def _explain_absent(trials: Trials, source: str) -> str:
+    """What a session has instead of several values of a source."""
+    if source == "context":
+        return "no context column" if trials.context is None else "one context"
+    return "no sample_s column" if trials.sample_s is None else "one sample interval"
 
 
 def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str]:
@@ -137,35 +126,6 @@ def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str
     }
     stages.run(sorted(tasks.values(), key=lambda task: -task.kwargs["latent_dim"]))
     return {which: task.key for which, task in tasks.items()}
-
-
-def _run_tests(
-    stages: Stages, sizes: Sizes, ladders: dict[tuple[int, int, str], str]
-) -> tuple[dict[tuple[int, str], str], dict[str, str], dict[str, str], str]:
-    """Persistence of every source's push at each size, tests of its routes, and rivals."""
-    best = sizes.chosen[ALL]
-    profiles = {}
-    for shift in sorted({shift for shift, _, _ in ladders}):
-        size = shifted(best, shift, len(stages.trials.unit))
-        assert size is not None
-        for source in stages.job.compare.sources:
-            ladder = ladders[shift, ALL, source if shift else ""]
-            profiles[shift, source] = stages.profile_task(size, ladder, source, shift != 0)
-    routes = {
-        source: stages.routes_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
-    }
-    rivals = {
-        source: stages.rivals_task(best, ladders[0, ALL, ""], source) for source in stages.job.compare.sources
-    }
-    check = stages.check_task(best, ladders[0, ALL, ""])
-    tasks = [*profiles.values(), *routes.values(), *rivals.values(), check]
-    stages.run(sorted(tasks, key=lambda task: -task.kwargs["latent_dim"]))
-    return (
-        {which: task.key for which, task in profiles.items()},
-        {source: task.key for source, task in routes.items()},
-        {source: task.key for source, task in rivals.items()},
-        check.key,
-    )
 
 
 def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
@@ -213,7 +173,6 @@ def _run_decode(stages: Stages, sizes: Sizes) -> tuple[Decoding, ...]:
                 trials.bin_s,
                 variant=variant,
                 draws=job.decode.draws,
-                level=job.tests.level,
                 seed=job.seed,
             )
     return tuple(found)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -28,7 +28,14 @@ Split = tuple[tuple[int, ...], int | None]
 # With a dimension to spare a search creeps along a ridge; what it has after this many steps lacks a nat or
 # two in all, which is little beside the smallest gain worth having.
 MAX_ITERATIONS, NEIGHBOUR_ITERATIONS = 300, 50
-_OF_TESTS = ("profile_push", "test_routes", "check_fit", "score_rivals")
+_OF_TESTS = (
+    "profile_push",
+    "test_routes",
+    "check_fit",
+    "score_rivals",
+    "score_unseen_units",
+    "score_unseen_condition",
+)
 
 
 @dataclass(frozen=True)
@@ -38,6 +45,12 @@ class Size:
     model: int
     latent_dim: int
     drift: bool
+
+
+def shifted(size: Size, shift: int, n_units: int) -> Size | None:
+    """The size with one latent dimension more or fewer; None where there is no such model."""
+    d = size.latent_dim + shift
+    return replace(size, latent_dim=d) if 1 <= d <= n_units else None
 
 
 @dataclass(frozen=True)
@@ -99,7 +112,8 @@ class Stages:
         """Run tasks in the workspace."""
         return self.workspace.run(tasks, self.data)
 
-    def _common(self, size: Size, held_out: Sequence[int]) -> dict[str, Any]:
+    def common(self, size: Size, held_out: Sequence[int]) -> dict[str, Any]:
+        """What every fit of a size on a training set is told."""
         return {
             "model": model_to_dict(self.models[size.model]),
             "latent_dim": size.latent_dim,
@@ -116,7 +130,7 @@ class Stages:
         """Fit the full account to what is left when folds are held out, and score those."""
         what = "all trials" if not held_out else f"without fold {' and '.join(str(f + 1) for f in held_out)}"
         extra = {} if inner is None else {"inner": inner}
-        kwargs = {**self._common(size, held_out), "tolerance": SIZE_TOLERANCE, **extra}
+        kwargs = {**self.common(size, held_out), "tolerance": SIZE_TOLERANCE, **extra}
         name = f"{size.latent_dim} latent dimensions, {what}"
         return self.task("fit_full", name, "size", deps, **kwargs)
 
@@ -245,7 +259,7 @@ class Stages:
         held = [] if where == ALL else [where]
         tolerance = HELD_OUT_TOLERANCE if held else NEIGHBOUR_TOLERANCE if scored else ALL_TOLERANCE
         kwargs = {
-            **self._common(size, held),
+            **self.common(size, held),
             "tolerance": tolerance,
             "sources": list(sources),
             "score_training": scored,
@@ -255,35 +269,3 @@ class Stages:
         only = f" for {sources[0]}" if len(sources) == 1 else ""
         name = f"accounts{only} at {size.latent_dim} latent dimensions, {what}"
         return self.task("fit_ladder", name, "accounts", [full], **kwargs)
-
-    def profile_task(self, size: Size, ladder: str, source: str, neighbour: bool) -> Task:
-        """Profile the persistence of a source's push from the accounts of a ladder on all trials."""
-        kwargs = {
-            **self._common(size, []),
-            "source": source,
-            "tolerance": NEIGHBOUR_TOLERANCE if neighbour else ALL_TOLERANCE,
-            "max_iterations": NEIGHBOUR_ITERATIONS if neighbour else MAX_ITERATIONS,
-            "course": not neighbour,
-        }
-        name = f"persistence of the {source} at {size.latent_dim} latent dimensions"
-        return self.task("profile_push", name, "persistence", [ladder], **kwargs)
-
-    def rivals_task(self, size: Size, ladder: str, source: str) -> Task:
-        """Fit the rivals of a source's pushes beside the accounts of a ladder on all trials."""
-        kwargs = {**self._common(size, []), "source": source, "tolerance": HELD_OUT_TOLERANCE}
-        return self.task("score_rivals", f"rivals of the {source}", "rivals", [ladder], **kwargs)
-
-    def check_task(self, size: Size, ladder: str) -> Task:
-        """Set the recorded session among sessions drawn from the full account's fit to all trials."""
-        kwargs = {"latent_dim": size.latent_dim, "seed": self.job.seed, "level": self.job.tests.level}
-        return self.task("check_fit", "predictive checks", "checks", [ladder], **kwargs)
-
-    def routes_task(self, size: Size, ladder: str, source: str) -> Task:
-        """Test the routes of a source from the accounts of a ladder on all trials."""
-        kwargs = {
-            **self._common(size, []),
-            "source": source,
-            "bootstrap": self.job.tests.bootstrap,
-            "assignment": self.job.tests.assignment,
-        }
-        return self.task("test_routes", f"tests of the {source}", "tests", [ladder], **kwargs)

@@ -5,6 +5,7 @@ Every function has the signature that `Task` asks for, reads fits from the store
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -29,6 +30,9 @@ from portfire.job._store import Store, task_key
 from portfire.session import Trials
 
 RATE_DRAWS = 20
+# A worker's memory up to which it keeps compiled code of several sizes: fits of small sessions take less
+# time than loading that code anew, and code of all sizes of a large one would add up to gigabytes.
+ROOM_MIB = 600.0
 
 
 def read_fit(store: Path, key: str) -> Fit:
@@ -40,12 +44,21 @@ _seen: list[int] = []
 
 
 def _let_go(latent_dim: int) -> None:
-    """Drop compiled code of another size: it stays on disk, and in memory it would add up to gigabytes."""
-    if _seen and _seen[-1] != latent_dim:
+    """Drop compiled code of another size where memory grows: it stays on disk, but loads in seconds."""
+    if _seen and _seen[-1] != latent_dim and _resident_mib() > ROOM_MIB:
         import jax
 
         jax.clear_caches()
     _seen[:] = [latent_dim]
+
+
+def _resident_mib() -> float:
+    """Memory of this process; without bound where the system does not tell."""
+    try:
+        pages = int(Path("/proc/self/statm").read_text(encoding="ascii").split()[1])
+    except OSError:
+        return float("inf")
+    return pages * os.sysconf("SC_PAGE_SIZE") / 2**20
 
 
 def _train_and_test(trials: Trials, kwargs: dict[str, Any]) -> tuple[Trials, np.ndarray]:
@@ -106,7 +119,14 @@ def fit_ladder(
 
     def refit(account: Account, start: Fit) -> Fit:
         return fit(
-            train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance
+            train,
+            start.setup.model,
+            account,
+            seed=seed,
+            start=start,
+            drift=drift,
+            tolerance=tolerance,
+            max_iterations=int(kwargs["max_iterations"]),
         )
 
     if kwargs["score_training"]:

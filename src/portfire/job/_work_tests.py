@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from portfire.accounts import Account, make_design
+from portfire.accounts import SOURCES, Account, make_design
 from portfire.comparison import (
     Bootstrap,
     Course,
@@ -16,7 +17,10 @@ from portfire.comparison import (
     bootstrap_score,
     check_predictions,
     cut_windows,
+    deal_units,
     find_course,
+    fold_of,
+    leave_out,
     list_rivals,
     profile_persistence,
     randomise_source,
@@ -25,6 +29,7 @@ from portfire.comparison import (
     score_rival,
     summarise_activity,
     summarise_profile,
+    unseen_units,
 )
 from portfire.errors import PortfireError
 from portfire.estimation import (
@@ -46,6 +51,7 @@ from portfire.session import Trials
 
 REMOVED = {"initial_unique": "sustained", "sustained_unique": "initial", "total": "none"}
 _RANDOM_DRAWS, _STOP_AT, _CHECK_DRAWS = 999, 20, 99
+_UNIT_GROUPS = 4
 # Signs are turned by blocks of so many trials, fewer where there would be less than so many blocks.
 _BLOCK, _LEAST_BLOCKS = 25, 24
 
@@ -167,6 +173,49 @@ def check_fit(
     content = {"checks": rows, "failed": say_failed(checks), "absent": None}
     Store(store).write(key, finite(content), {})
     return {"checks": len(rows)}
+
+
+def score_unseen_units(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Groups of units predicted from the others, on the trials that a fold holds out."""
+    trials = read_trials(data)
+    fitted = read_fit(store, deps[0])
+    fold = fold_of(trials.index, trials.n_session, int(kwargs["folds"]))
+    rows = np.flatnonzero(np.isin(fold, kwargs["held_out"]))
+    groups = deal_units(len(trials.unit), _UNIT_GROUPS, int(kwargs["seed"]))
+    loglik = unseen_units(fitted, trials[rows], groups)
+    Store(store).write(key, {"groups": [g.tolist() for g in groups]}, {"rows": rows, "loglik": loglik})
+    return {"trials": len(rows)}
+
+
+def score_unseen_condition(
+    store: Path, data: Path, kwargs: dict[str, Any], deps: tuple[str, ...], key: str
+) -> dict[str, float]:
+    """Accounts fitted to all conditions but one, and their scores of that one."""
+    _let_go(int(kwargs["latent_dim"]))
+    trials, seed = read_trials(data), int(kwargs["seed"])
+    stored = Store(store).read_meta(deps[0])["accounts"]
+    present = read_fit(store, next(iter(stored.values()))["key"]).setup.sources
+    every = [Account.parse(name).restrict(present) for name in stored]
+    accounts = [account for account in every if _concerns(account, every[0], kwargs["sources"])]
+
+    def refit(account: Account, train: Trials) -> Fit:
+        start = read_fit(store, stored[str(account)]["key"])
+        drift, tolerance = bool(kwargs["drift"]), float(kwargs["tolerance"])
+        return fit(
+            train, start.setup.model, account, seed=seed, start=start, drift=drift, tolerance=tolerance
+        )
+
+    found = leave_out(trials, int(kwargs["condition"]), accounts, refit)
+    arrays = {f"loglik_{k}": values for k, values in enumerate(found.loglik.values())}
+    Store(store).write(key, {"accounts": list(found.loglik)}, {"rows": found.rows, **arrays})
+    return {"accounts": len(accounts)}
+
+
+def _concerns(account: Account, full: Account, sources: Sequence[str]) -> bool:
+    """Whether an account differs from the full one in one of these sources, or not at all."""
+    return all(account.route(s) == full.route(s) or s in sources for s in SOURCES)
 
 
 def _describe_course(course: Course) -> dict[str, Any]:

@@ -236,7 +236,7 @@ def explain_untested(run: RunFolder) -> list[str]:
         if source == "context" and run.trials is not None and len(run.contexts) < 2:
             reason = f"the session has {'one context' if run.contexts else 'no context column'}"
         elif source == "interval" and run.trials is not None and len(run.samples) < 2:
-            reason = f"the session has {'one sample interval' if run.samples else 'no sample intervals'}"
+            reason = f"the session has {'one sample interval' if run.samples else 'no sample_s column'}"
         elif source not in asked:
             reason = "the job does not list this source"
         else:

@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 
 from portfire.errors import PortfireError
+from portfire.estimation import kind_of
 from portfire.simulate._system import Boundary, System, carry, path_inputs
 from portfire.simulate._timer import first_passage
 
@@ -120,6 +121,9 @@ def _draw_paths(
     setup, params = system.setup, system.params
     n, d = len(condition), setup.latent_dim
     rows = system.rows[condition]
+    if setup.model.dynamics != "linear":
+        drawn = kind_of(setup).draw_forward(params, setup, rows, n_time, rng)
+        return drawn.path, drawn.initial, drawn.sustained
     noise_sd = np.sqrt(float(params["noise"]))
     own_initial = rng.standard_normal((n, d)) @ params["initial_factor"].T
     own_sustained = rng.standard_normal((n, d)) @ params["sustained_factor"].T

@@ -9,6 +9,7 @@ import numpy as np
 
 from portfire.accounts import Account
 from portfire.errors import InputError
+from portfire.estimation import kind_of
 from portfire.simulate._system import Condition, ResponseHazard, System, design_rows
 
 if TYPE_CHECKING:
@@ -55,13 +56,7 @@ def system_of_fit(
             f"account {str(wanted)!r}: the fit is of {str(fitted.account)!r} and has no push for the routes "
             "that this adds; leave them out, or fit an account that has them."
         )
-    push = params["push"].copy()
-    for k, column in enumerate(setup.columns):
-        if not wanted.allows(column.source, column.persistence_s):
-            push[:, k] = 0.0
-    params["push"] = push
-    for name, h in (("initial_factor", 0.0), ("sustained_factor", np.inf)):
-        params[name] = params[name] * float(wanted.allows("trial", h))
+    params = kind_of(setup).project(params, setup, wanted)
     params.setdefault("log_run_up_noise", np.log(_RUN_UP_SHARE * params["noise"]))
     places, units = _choose_units(fitted.session["units"], n_units, seed)
     for name in ("readout", "log_rate", "drift"):

@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 
 from portfire.dynamics import Setup, parameter_shapes
+from portfire.estimation import kind_of
 from portfire.session import Trials
 from portfire.simulate._draw import Drawn
 from portfire.simulate._system import Boundary, System
@@ -83,12 +84,7 @@ def describe_truth(drawn: Drawn, made_from: dict[str, Any]) -> dict[str, Any]:
         "account": str(system.account),
         "sources": {s: _EFFECTS[system.account.route(s)] for s in setup.sources},
         "model": {
-            "equations": (
-                "x_0 = sum_k kernel_k[0] push_k z_k + N(0, P0); "
-                "x_t = A x_{t-1} + b + cue bumps_t + sum_k kernel_k[t] push_k z_k "
-                "+ kernel_sustained[t] LS e + N(0, q I); P0 = noise of initial_bins bins + L0 L0'; "
-                "log rate (spikes/s) = C x_t + d + drift basis"
-            ),
+            "equations": kind_of(setup).equations,
             "bin_s": setup.bin_s,
             "latent_dim": setup.latent_dim,
             "n_reference": setup.n_reference,
@@ -119,7 +115,8 @@ def _round(value: np.ndarray, digits: int = 6) -> Any:
 
 
 def _time_constants(system: System) -> list[float | None]:
-    size = np.sort(np.abs(np.linalg.eigvals(system.params["transition"])))[::-1]
+    transition = kind_of(system.setup).local_transition(system.params, system.setup)
+    size = np.sort(np.abs(np.linalg.eigvals(transition)))[::-1]
     return [float(f"{-system.setup.bin_s / np.log(s):.4g}") if 0 < s < 1 else None for s in size]
 
 

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 Variant = Literal["all", "late"]
+LATE_S = 0.15
 
 
 @dataclass(frozen=True)
@@ -46,8 +47,6 @@ class Decoding:
         Distinct shifts.
     r2_window : float or None
         The observed statistic within the window of the shifts, which p compares with the null.
-    warnings : tuple of str
-        Sentences on what could not be computed or cannot be small.
     row : (scored,) int
         Rows of the scored trials in the input.
     condition, fold : (scored,) int
@@ -70,7 +69,6 @@ class Decoding:
     null95: tuple[float, float] | None
     null_draws: int
     r2_window: float | None
-    warnings: tuple[str, ...]
     row: NDArray[np.int64]
     condition: NDArray[np.int64]
     fold: NDArray[np.int64]

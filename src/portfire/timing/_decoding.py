@@ -11,13 +11,12 @@ from numpy.typing import ArrayLike, NDArray
 
 from ..comparison import block_of, fold_of, training_rows
 from ..errors import PortfireError
-from ._decoded import Decoding, Variant
+from ._decoded import LATE_S, Decoding, Variant
 from ._ridge import HeldOut, predict_held_out, standardise
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-LATE_S = 0.15
 MARGIN_SHARE = 0.2
 N_BOOTSTRAP = 2000
 
@@ -58,7 +57,6 @@ def decode(
     bin_s: float,
     variant: Variant = "all",
     draws: int = 1000,
-    level: float = 0.05,
     seed: int = 0,
 ) -> tuple[Decoding, ...]:
     """Predict the produced interval within a condition from features known at a cutoff.
@@ -98,8 +96,6 @@ def decode(
         predicts it.
     draws : int, default 1000
         Shifts at most; fewer where the session has fewer, evenly chosen where it has more.
-    level : float, default 0.05
-        Level that p is meant for; a warning says when there are too few shifts to reach it.
     seed : int, default 0
         Of the bootstrap.
 
@@ -152,7 +148,6 @@ def decode(
                 int(running.sum()),
                 label,
                 produced,
-                level,
                 seed,
             )
         )
@@ -247,7 +242,6 @@ def _summarise(
     n_running: int,
     label: Ints,
     produced: Floats,
-    level: float,
     seed: int,
 ) -> Decoding:
     scored = np.flatnonzero(held.scored[:, 0])
@@ -255,14 +249,6 @@ def _summarise(
     z, predicted = held.z[scored, 0], held.predicted[scored, 0]
     center, scale = held.center[scored, 0], held.scale[scored, 0]
     r2 = float(held.r2()[0])
-    where = f"decode from {name} at {cutoff_s:g} s ({variant} responses)"
-    warnings = []
-    n_dropped = len(trials.row) - len(scored)
-    if n_dropped:
-        warnings.append(
-            f"{where}: {n_dropped} of {len(trials.row)} trials are not scored, because fewer than three "
-            "training trials of their condition were still running or their intervals did not vary"
-        )
     ci95 = None
     if len(scored):
         block = block_of(trials.index[scored], trials.n_session, trials.n_folds)
@@ -273,11 +259,6 @@ def _summarise(
         p = (1.0 + float((window.null >= window.observed).sum())) / (1.0 + n_null)
         low, high = np.quantile(window.null, [0.025, 0.975])
         null95 = (float(low), float(high))
-    if 1.0 / (1.0 + n_null) > level:
-        warnings.append(
-            f"{where}: {len(trials.row)} trials allow only {n_null} distinct shifts, so p cannot fall below "
-            f"{1.0 / (1.0 + n_null):.2g} and never reaches {level:g}"
-        )
     return Decoding(
         cutoff_s=cutoff_s,
         features=name,
@@ -291,7 +272,6 @@ def _summarise(
         null95=null95,
         null_draws=n_null,
         r2_window=None if window is None else window.observed,
-        warnings=tuple(warnings),
         row=row.astype(np.int64),
         condition=label[row],
         fold=trials.fold[scored],
