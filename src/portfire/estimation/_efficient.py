@@ -14,9 +14,9 @@ from portfire.estimation._directions import Covariances, Directions
 from portfire.estimation._draws import draw_trials
 from portfire.estimation._fit import Fit
 from portfire.estimation._freedom import free_parameters
-from portfire.estimation._objective import Objective, Values, to_device
+from portfire.estimation._objective import Objective, Values, settle, to_device
 from portfire.estimation._scaling import Scaling, make_scaling
-from portfire.inference import bound_scores, fit_bound, pack, start_guess
+from portfire.inference import bound_scores, pack, start_guess
 from portfire.session import Trials
 
 Array = NDArray[np.float64]
@@ -103,7 +103,7 @@ def score_each(
     for chunk in packed.chunks:
         for column, value in (rows or {}).items():
             chunk = chunk._replace(rows=chunk.rows.at[column].set(value))
-        bound = fit_bound(device, setup, chunk, start_guess(setup, chunk))
+        bound = settle(device, setup, chunk, start_guess(setup, chunk))
         parts.append(bound_scores(device, setup, chunk, bound))
     return {
         name: np.moveaxis(packed.gather([np.asarray(part[name]) for part in parts]), 0, -1) for name in params

@@ -18,10 +18,10 @@ from portfire.errors import PortfireError
 from portfire.estimation._ascent import _open_covariances
 from portfire.estimation._fit import Fit
 from portfire.estimation._freedom import free_parameters, project
-from portfire.estimation._objective import Objective, Values, drift_penalty, n_threads, to_device
+from portfire.estimation._objective import Objective, Values, drift_penalty, n_threads, settle, to_device
 from portfire.estimation._optimise import ascend
 from portfire.estimation._scaling import make_scaling
-from portfire.inference import Chunk, Guess, Packed, bound_gradient, fit_bound, pack, start_guess
+from portfire.inference import Chunk, Guess, Packed, bound_gradient, pack, start_guess
 from portfire.session import Trials
 
 Array = NDArray[np.float64]
@@ -96,7 +96,7 @@ class GroupedObjective:
         def one(task: tuple[int, Chunk, Guess]) -> tuple[int, Guess, float, Params]:
             g, chunk, guess = task
             own = bent[g][0]
-            bound = fit_bound(own, self.setup, chunk, guess)
+            bound = settle(own, self.setup, chunk, guess)
             gradient = bound_gradient(own, self.setup, chunk, bound)
             return g, bound.guess, float(bound.value @ chunk.weight), gradient
 

@@ -21,6 +21,7 @@ from portfire.inference._variational import (
     Guess,
     bound_gradient,
     fit_bound,
+    guess_of_posterior,
     start_guess,
     turn_guess,
 )
@@ -44,6 +45,7 @@ __all__ = [
     "factorise",
     "filter_particles",
     "fit_bound",
+    "guess_of_posterior",
     "importance",
     "invert_band",
     "lane_keys",
