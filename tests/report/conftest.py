@@ -249,10 +249,14 @@ def invent_contrasts(what: Invention) -> list[dict[str, Any]]:
                 "at_previous_dim": None,
             },
             "persistence_words": f"the push of the {source} lasts as it was invented",
-            "persistence_profile": {
-                str(what.n_latents + shift): {"grid_s": grid, "loss_nats": [(2 + shift) * x for x in losses]}
+            "persistence_profile": [
+                {
+                    "latent_dim": what.n_latents + shift,
+                    "grid_s": grid,
+                    "loss_nats": [(2 + shift) * x for x in losses],
+                }
                 for shift in (-1, 0, 1)
-            },
+            ],
             "course": {
                 "levels": ["sample"] if source == "interval" else list(what.contexts[:-1]) or ["only"],
                 "edges_s": [0.02, 0.12, 0.3, 0.6],
@@ -266,7 +270,7 @@ def invent_contrasts(what: Invention) -> list[dict[str, Any]]:
     known["trial"] |= {
         "persistence_s": None,
         "persistence_words": "two pushes: one alone stays 9.1 nats behind",
-        "persistence_profile": {str(what.n_latents): {"grid_s": grid, "loss_nats": rising}},
+        "persistence_profile": [{"latent_dim": what.n_latents, "grid_s": grid, "loss_nats": rising}],
         "course": None,
     }
     drawn = {"p": 0.012, "se": 0.004, "draws": 199}

@@ -32,15 +32,16 @@ def describe_persistence(findings: Findings, store: Store, source: str) -> dict[
     return {
         "persistence_s": summary,
         "persistence_words": say_persistence(here, by_shift.get(1)),
-        "persistence_profile": {
-            str(chosen + shift): {
+        "persistence_profile": [
+            {
+                "latent_dim": chosen + shift,
                 "grid_s": found["grid_s"],
                 "loss_nats": (np.max(found["values"]) - np.array(found["values"])).tolist(),
                 "behind_both_nats": found["behind_both"],
                 "two_pushes": found["two_pushes"],
             }
             for shift, found in sorted(by_shift.items())
-        },
+        ],
         "course": here["course"],
     }
 

@@ -65,7 +65,7 @@ def draw_persistence(run: RunFolder) -> Drawn | Absent:
 
 
 def _draw_profile(axes: Axes, row: Mapping[str, Any], chosen: Any) -> None:
-    profiles = {int(d): p for d, p in row["persistence_profile"].items()}
+    profiles = {int(p["latent_dim"]): p for p in row["persistence_profile"]}
     looks = assign_looks([str(d) for d in sorted(profiles)])
     labels: list[str] = []
     for dim, profile in sorted(profiles.items()):
