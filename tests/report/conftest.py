@@ -354,6 +354,36 @@ def invent_result(what: Invention, trials: pd.DataFrame, scores: pd.DataFrame) -
         "accounts": accounts,
         "contrasts": invent_contrasts(what),
         "decode": invent_decode(what) if what.responses else [],
+        "yardsticks": {
+            "condition_rate_bits_per_spike": 0.123,
+            "unseen_units_bits_per_spike": 0.187,
+            "unseen_units_groups": 4,
+        },
+        "unseen_conditions": [
+            {"account": accounts[0]["account"], "loglik_per_trial": -820.4, "less_full": 0.0, "conditions": 9}
+        ],
+        "rivals": [
+            {
+                "rival": "a change of speed",
+                "source": "interval",
+                "parameters": 1,
+                "ahead_nats": {"neither": 9.0, "initial": 6.0, "sustained": -12.3, "both": -11.0},
+                "beats": ["neither", "initial"],
+                "beside_nats": 0.4,
+                "p": 0.37,
+            }
+        ],
+        "checks": [
+            {
+                "check": "rates",
+                "p": 0.41,
+                "recorded": 0.3,
+                "drawn": 0.31,
+                "difference": 0.02,
+                "matters": 0.15,
+                "failed": False,
+            }
+        ],
         "warnings": ["Trial time predicts the rate of 3 units (R² above 0.3)."],
         "settings": {
             "window": {"bin_s": 0.02, "before_set_s": 0.0, "min_rate_hz": 0.5},

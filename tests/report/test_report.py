@@ -203,6 +203,21 @@ def test_hostile_names_are_text_and_nothing_else(small: Write, amend: Callable[.
     assert "_hidden" in drawn
 
 
+def test_tests_rivals_checks_and_yardsticks_are_on_the_page(page: Page) -> None:
+    for words in (
+        "Tests that lean less on the model",
+        "Rivals of additive pushes",
+        "a change of speed",
+        "Predictive checks",
+        "reaches 0.123",
+        "reach 0.187",
+        "Conditions predicted from the others",
+        "The push of the interval lasts as it was invented.",
+        "Two pushes: one alone stays 9.1 nats behind",
+    ):
+        assert words in page.words, words
+
+
 def test_settings_sizes_and_left_out_are_tables(page: Page) -> None:
     words = page.words
     assert "48, 2 left out" in words

@@ -15,7 +15,7 @@ from portfire.report._folder import RunFolder
 from portfire.report._persistence import state_persistence
 from portfire.report._rates import state_rates
 from portfire.report._style import Absent, Drawn, clean
-from portfire.report._tables_tests import list_checks, list_rivals, list_tests
+from portfire.report._tables_tests import list_checks, list_rivals, list_tests, list_unseen, state_yardsticks
 
 
 def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
@@ -36,6 +36,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
         rates_sentences=state_rates(run),
         levels=describe_levels(run),
         by_time=_words.state_time(run),
+        yardsticks=state_yardsticks(run),
         by_fold=_words.state_by_fold(run),
         figures={key: _as_dict(figure) for key, figure in figures.items()},
         tables={
@@ -44,6 +45,7 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
             "tests": list_tests(run),
             "rivals": list_rivals(run),
             "checks": list_checks(run),
+            "unseen": list_unseen(run),
             "accounts": _tables.list_accounts(run),
             "sizes": _tables.list_sizes(run),
             "behaviour": _tables.list_behaviour(run),

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from portfire.report._accounts import shorten_account
 from portfire.report._folder import RunFolder
 from portfire.report._tables import Table
 from portfire.report._words import name_source, write_number, write_p_value
@@ -130,3 +131,43 @@ def list_checks(run: RunFolder) -> Table | None:
         rows,
         n_words=2,
     )  # fmt: skip
+
+
+def list_unseen(run: RunFolder) -> Table | None:
+    """Return the scores of conditions that a fit never saw; None where the result holds none."""
+    rows = [
+        [
+            shorten_account(row.get("account", "")),
+            write_number(row.get("loglik_per_trial")),
+            write_number(row.get("less_full"), 3),
+            "not given" if row.get("less_full_se") is None else write_number(row["less_full_se"], 3),
+            str(row.get("conditions")),
+        ]
+        for row in run.rows("unseen_conditions")
+    ]
+    if not rows:
+        return None
+    return Table(
+        "Conditions predicted from the others",
+        (
+            ("account", "the route of every source"),
+            ("log-likelihood", "mean over the trials of conditions that the fit never saw, nats a trial"),
+            ("less full", "that less the full account's, mean over conditions, nats a trial"),
+            ("SE", "its standard error over conditions"),
+            ("conditions", "number of conditions left out in turn"),
+        ),
+        rows,
+    )
+
+
+def state_yardsticks(run: RunFolder) -> str | None:
+    """Return what the mean rate of the condition and unseen units reach; None where not in the result."""
+    found = run.part("yardsticks")
+    if not found:
+        return None
+    rate, units = (found.get(f"{key}_bits_per_spike") for key in ("condition_rate", "unseen_units"))
+    return (
+        "Yardsticks on held-out trials, in bits a spike above a constant rate: the trial-averaged rate of "
+        f"the condition reaches {write_number(rate, 3)}; units predicted from the other units "
+        f"({found.get('unseen_units_groups')} groups in turn) reach {write_number(units, 3)}."
+    )
