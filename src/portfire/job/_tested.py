@@ -83,7 +83,7 @@ def run_tests(stages: Stages, sizes: Sizes, ladders: Mapping[tuple[int, int, str
         unseen = _unseen_tasks(stages, best, whole)
         if not unseen:
             not_run.append("No unseen conditions: leaving one out leaves its level out of the others.")
-    elif len(stages.trials.conditions) > 1:
+    elif sources and len(stages.trials.conditions) > 1:
         not_run.append("No unseen conditions: the job does not ask for them ([tests] unseen_conditions).")
     units: list[Task] = []
     if model.readout != "gaussian" and len(stages.trials.unit) > 1:
