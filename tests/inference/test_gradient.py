@@ -43,3 +43,25 @@ def test_gradient_agrees_with_central_differences(readout: str, n_before: int) -
             numeric[at] = (ends[0] - ends[1]) / (2 * STEP)
         assert np.abs(numeric).max() > 1e-3, name
         np.testing.assert_allclose(found, numeric, rtol=2e-6, atol=2e-6, err_msg=name)
+
+
+def test_gradient_by_the_course_of_a_push_with_kernels_of_its_own() -> None:
+    """What parameters may add: kernels that are not those of the setup, and an input of every bin."""
+    case = rich_case("poisson", 0, seed=4)
+    rng = np.random.default_rng(0)
+    n_columns, n_time = len(case.setup.columns), case.chunk.mask.shape[0]
+    decay = rng.uniform(0.3, 1.0, n_columns + 1)
+    course = 0.1 * rng.standard_normal((case.setup.latent_dim, n_columns, n_time))
+    case = case.with_params(decay=decay, course=course)
+    posterior = laplace(case.params, case.setup, case.chunk, start_path(case.setup, case.chunk))
+    gradient = laplace_gradient(case.params, case.setup, case.chunk, posterior)[0]
+    assert not np.any(gradient["decay"])
+    for name in ("course", "push", "sustained_factor"):
+        value, found = np.asarray(case.params[name]), np.asarray(gradient[name])
+        for at in list(np.ndindex(value.shape))[::3]:
+            ends = []
+            for sign in (1, -1):
+                moved = value.copy()
+                moved[at] += sign * STEP
+                ends.append(evaluate(case.with_params(**{name: moved}), posterior.mode)[0])
+            assert found[at] == pytest.approx((ends[0] - ends[1]) / (2 * STEP), rel=2e-6, abs=2e-6), name

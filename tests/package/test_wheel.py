@@ -170,7 +170,10 @@ def explained_names(text: str) -> set[str]:
 
 
 # The demo has one session, and every verdict may be a sure one.
-OF_OTHER_RUNS = {"open", "sessions"}
+OF_OTHER_RUNS = {
+    *("open", "sessions", "absent", "bootstrap", "statistic", "p_at_bound"),
+    *("refits", "refits_mean_score", "refits_mean_lr", "less_full", "less_full_se", "by_condition"),
+}
 # Keys below these are labels of the data or of other software, or are explained where the job file is.
 OPEN_KEYS = {"units_left_out", "trials_left_out", "settings", "versions", "at_dims", "ends_nats"}
 

@@ -233,6 +233,51 @@ def invent_contrasts(what: Invention) -> list[dict[str, Any]]:
         },
         "gain_k": {"initial_unique": 3, "sustained_unique": 3, "total": 6},
     }
+    grid = [0.0, 0.05, 0.1, 0.2, 0.4, 0.8, 1.6, None]
+    rising, falling = (
+        [0.0, 2.1, 4.0, 7.5, 11.0, 14.0, 16.0, 17.2],
+        [40.1, 31.0, 20.0, 9.0, 3.0, 0.8, 0.1, 0.0],
+    )
+    lasts = {"interval": (falling, None, [0.9, None]), "context": (rising, 0.0, [0.0, 0.04])}
+    n_levels = max(1, len(what.contexts) - 1)
+    for source, (losses, estimate, interval) in lasts.items():
+        known[source] |= {
+            "persistence_s": {
+                "estimate": estimate,
+                "ci95": interval,
+                "at_next_dim": {"estimate": estimate, "ci95": interval, "two_pushes": False},
+                "at_previous_dim": None,
+            },
+            "persistence_words": f"the push of the {source} lasts as it was invented",
+            "persistence_profile": [
+                {
+                    "latent_dim": what.n_latents + shift,
+                    "grid_s": grid,
+                    "loss_nats": [(2 + shift) * x for x in losses],
+                }
+                for shift in (-1, 0, 1)
+            ],
+            "course": {
+                "levels": ["sample"] if source == "interval" else list(what.contexts[:-1]) or ["only"],
+                "edges_s": [0.02, 0.12, 0.3, 0.6],
+                "at_cue": [0.4] * n_levels,
+                "at_cue_se": [0.1] * n_levels,
+                "rate": [[1.0, 0.9, 1.1]] * n_levels,
+                "rate_low": [[0.5, 0.4, 0.4]] * n_levels,
+                "rate_high": [[1.5, 1.4, 1.8]] * n_levels,
+            },
+        }
+    known["trial"] |= {
+        "persistence_s": None,
+        "persistence_words": "two pushes: one alone stays 9.1 nats behind",
+        "persistence_profile": [{"latent_dim": what.n_latents, "grid_s": grid, "loss_nats": rising}],
+        "course": None,
+    }
+    drawn = {"p": 0.012, "se": 0.004, "draws": 199}
+    more["tests"] = {
+        entry: {"blocks": drawn, "bootstrap": drawn, "labels": drawn if entry == "total" else None}
+        for entry in ("initial_unique", "sustained_unique", "total")
+    }
     scores = {"none": -823.1, "initial": -821.0, "sustained": -820.2, "both": -820.1}
     return [{"source": s} | scores | known[s] | more for s in what.sources]
 
@@ -309,6 +354,36 @@ def invent_result(what: Invention, trials: pd.DataFrame, scores: pd.DataFrame) -
         "accounts": accounts,
         "contrasts": invent_contrasts(what),
         "decode": invent_decode(what) if what.responses else [],
+        "yardsticks": {
+            "condition_rate_bits_per_spike": 0.123,
+            "unseen_units_bits_per_spike": 0.187,
+            "unseen_units_groups": 4,
+        },
+        "unseen_conditions": [
+            {"account": accounts[0]["account"], "loglik_per_trial": -820.4, "less_full": 0.0, "conditions": 9}
+        ],
+        "rivals": [
+            {
+                "rival": "a change of speed",
+                "source": "interval",
+                "parameters": 1,
+                "ahead_nats": {"neither": 9.0, "initial": 6.0, "sustained": -12.3, "both": -11.0},
+                "beats": ["neither", "initial"],
+                "beside_nats": 0.4,
+                "p": 0.37,
+            }
+        ],
+        "checks": [
+            {
+                "check": "rates",
+                "p": 0.41,
+                "recorded": 0.3,
+                "drawn": 0.31,
+                "difference": 0.02,
+                "matters": 0.15,
+                "failed": False,
+            }
+        ],
         "warnings": ["Trial time predicts the rate of 3 units (R² above 0.3)."],
         "settings": {
             "window": {"bin_s": 0.02, "before_set_s": 0.0, "min_rate_hz": 0.5},

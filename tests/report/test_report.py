@@ -20,6 +20,7 @@ from portfire.report import draw_report
 
 FIGURES = (
     "contrasts",
+    "persistence",
     "scores",
     "behaviour",
     "paths",
@@ -202,6 +203,21 @@ def test_hostile_names_are_text_and_nothing_else(small: Write, amend: Callable[.
     assert "_hidden" in drawn
 
 
+def test_tests_rivals_checks_and_yardsticks_are_on_the_page(page: Page) -> None:
+    for words in (
+        "Tests that lean less on the model",
+        "Rivals of additive pushes",
+        "a change of speed",
+        "Predictive checks",
+        "reaches 0.123",
+        "reach 0.187",
+        "Conditions predicted from the others",
+        "The push of the interval lasts as it was invented.",
+        "Two pushes: one alone stays 9.1 nats behind",
+    ):
+        assert words in page.words, words
+
+
 def test_settings_sizes_and_left_out_are_tables(page: Page) -> None:
     words = page.words
     assert "48, 2 left out" in words
@@ -291,7 +307,7 @@ def test_result_alone_is_enough_and_old_figures_go(drawn: Path, tmp_path: Path) 
     for name in ("trials.parquet", "scores.parquet", "decode.parquet", "latents.nc", "rates.nc"):
         (out / name).unlink()
     page = read_page(out)
-    assert sorted(path.stem for path in (out / "figures").iterdir()) == ["contrasts", "decode"]
+    assert sorted(path.stem for path in (out / "figures").iterdir()) == ["contrasts", "decode", "persistence"]
     assert "is not drawn: the run folder holds no such predictions (decode.parquet)" in page.words
     assert "the run folder holds no latents.nc and no trials.parquet" in page.words
     assert "the run folder holds no rates.nc" in page.words

@@ -104,7 +104,11 @@ def _count(full: Account, smaller: Account, source: str, setup: Setup) -> tuple[
 
 
 def contrast_sources(
-    scored: Scored, sources: Sequence[str], level: float, min_gain: float
+    scored: Scored,
+    sources: Sequence[str],
+    level: float,
+    min_gain: float,
+    drawn: Mapping[tuple[str, str], float] | None = None,
 ) -> tuple[Contrast, ...]:
     """Contrast the routes of every source; p values are adjusted over all entries (Holm).
 
@@ -117,6 +121,8 @@ def contrast_sources(
         Largest adjusted p that counts as evidence.
     min_gain : float
         Smallest gain worth having (nats/trial).
+    drawn : mapping of (str, str) to float, optional
+        p by source and entry that takes the place of that of the likelihood ratio, before adjustment.
 
     Returns
     -------
@@ -130,7 +136,8 @@ def contrast_sources(
         smaller = full.replace(source, _TAKEN[name])
         fixed, dims, total = _count(full, smaller, source, scored.setup)
         statistic = max(0.0, 2 * (scored.values[str(full)] - scored.values[str(smaller)]))
-        raw.append((smaller, statistic, fixed, dims, total, likelihood_ratio_p(statistic, fixed, dims)))
+        p_raw = (drawn or {}).get((source, name), likelihood_ratio_p(statistic, fixed, dims))
+        raw.append((smaller, statistic, fixed, dims, total, p_raw))
     adjusted = holm([row[-1] for row in raw])
     entries: dict[tuple[str, str], Entry] = {}
     for key, (smaller, statistic, fixed, dims, total, p_raw), p in zip(keys, raw, adjusted, strict=True):

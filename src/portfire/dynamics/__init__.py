@@ -14,6 +14,7 @@ from portfire.dynamics._readouts import READOUTS, Curvature, Readout, own_gradie
 from portfire.dynamics._settings import SETTINGS, LinearSettings
 from portfire.dynamics._setup import Setup, make_setup, n_drift_functions
 from portfire.dynamics._spec import ModelFile, SimulateSettings, model_from_dict, model_to_dict, read_model
+from portfire.dynamics._spread import decay_of, spread_kernels
 
 __all__ = [
     "READOUTS",
@@ -28,6 +29,7 @@ __all__ = [
     "Setup",
     "SimulateSettings",
     "accumulated_noise",
+    "decay_of",
     "find_model",
     "initial_covariance",
     "make_setup",
@@ -39,5 +41,6 @@ __all__ = [
     "path_inputs",
     "path_prior",
     "read_model",
+    "spread_kernels",
     "shipped_models",
 ]

@@ -9,6 +9,7 @@ import jax.numpy as jnp
 from jax import lax
 
 from portfire.dynamics._setup import Setup
+from portfire.dynamics._spread import spread_kernels
 
 Params = dict[str, jax.Array]
 
@@ -76,6 +77,12 @@ def initial_covariance(params: Params, setup: Setup) -> jax.Array:
     return accumulated_noise(params["transition"], params["noise"], setup.initial_bins) + own
 
 
+def _kernels(params: Params, setup: Setup, n_time: int) -> jax.Array:
+    # Kernels are chosen, not ascended: their slope at decay 0 is of no use to anyone.
+    fixed = {name: lax.stop_gradient(params[name]) for name in ("decay",) if name in params}
+    return jnp.asarray(spread_kernels(fixed, setup, n_time, jnp))
+
+
 def path_prior(params: Params, setup: Setup, n_time: int) -> PathPrior:
     """The path prior over ``n_time`` bins, of which the first ``setup.n_before`` are run-up."""
     d, before = setup.latent_dim, setup.n_before
@@ -84,7 +91,7 @@ def path_prior(params: Params, setup: Setup, n_time: int) -> PathPrior:
     run_up_noise = jnp.exp(params["log_run_up_noise"]) if before else params["noise"]
     transition = jnp.where(in_run_up[:, None, None], identity, params["transition"])
     step_noise = jnp.where(in_run_up, run_up_noise, params["noise"])
-    kernel = jnp.asarray(setup.border_kernel(n_time - before))
+    kernel = _kernels(params, setup, n_time - before)[-1]
     into_step = jnp.concatenate([jnp.zeros(before), kernel[1:]])
     factor = params["sustained_factor"]
     cov = initial_covariance(params, setup)
@@ -111,6 +118,9 @@ def path_inputs(params: Params, setup: Setup, n_time: int, rows: jax.Array) -> j
 
     Parameters
     ----------
+    params : dict of arrays
+        Optional beside those of `parameter_shapes`: ``decay`` (see `spread_kernels`), and ``course``,
+        shape (D, column, time), what a unit of each design row adds to the input of every bin.
     rows : array, shape (column, trial)
         Design rows of the trials.
 
@@ -121,8 +131,10 @@ def path_inputs(params: Params, setup: Setup, n_time: int, rows: jax.Array) -> j
     """
     before = setup.n_before
     n_after = n_time - before
-    kernels = jnp.asarray(setup.kernels(n_after))
+    kernels = _kernels(params, setup, n_after)[:-1]
     spread = jnp.einsum("dc,ct,cb->tdb", params["push"], kernels, rows)
+    if "course" in params:
+        spread = spread + jnp.einsum("dct,cb->tdb", params["course"][:, :, :n_after], rows)
     constant = params["cue"] @ jnp.asarray(setup.cue_basis(n_after)) + params["offset"][:, None]
     constant = jnp.where(jnp.arange(n_after) > 0, constant, 0.0)
     after = spread + constant.T[:, :, None]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from portfire.accounts import Account
-from portfire.dynamics import Setup
+from portfire.dynamics import Setup, spread_kernels
 from portfire.estimation._ascent import find_maximum
 from portfire.estimation._freedom import count_additive_route, free_parameters, project
 from portfire.estimation._gauge import canonical_map
@@ -106,7 +106,8 @@ class Linear:
         self, params: Values, setup: Setup, rows: np.ndarray, n_time: int, rng: np.random.Generator
     ) -> Forward:
         d, noise = setup.latent_dim, float(params["noise"])
-        kernels, border = setup.kernels(n_time), setup.border_kernel(n_time)
+        spread = spread_kernels(params, setup, n_time)
+        kernels, border = spread[:-1], spread[-1]
         at_cue = np.zeros((d, d))
         for _ in range(setup.initial_bins):
             at_cue = params["transition"] @ at_cue @ params["transition"].T + noise * np.eye(d)

@@ -19,7 +19,10 @@ from portfire.inference import (
     Path,
     bound_gradient,
     fit_bound,
+    guess_of_posterior,
+    laplace,
     start_guess,
+    start_path,
     turn_guess,
 )
 
@@ -39,6 +42,19 @@ def to_device(params: Values) -> dict[str, jax.Array]:
 def drift_penalty(params: Values) -> float:
     """Minus the log prior of the drift coefficients (unit variance), up to a constant, in nats."""
     return 0.5 * float(np.sum(params["drift"] ** 2))
+
+
+def settle(device: dict, setup: Setup, chunk: Chunk, guess: Guess) -> Bound:
+    """The bound of a chunk; a search that fails from its guess starts anew from the Laplace posterior."""
+    bound = fit_bound(device, setup, chunk, guess)
+    if np.all(np.asarray(bound.converged) | (np.asarray(chunk.weight) == 0)):
+        return bound
+    return fit_bound(
+        device,
+        setup,
+        chunk,
+        guess_of_posterior(laplace(device, setup, chunk, start_path(setup, chunk))),
+    )
 
 
 class Objective:
@@ -82,7 +98,7 @@ class Objective:
             self.frame = frame
 
         def one(task: tuple[Chunk, Guess]) -> tuple[Bound, dict]:
-            bound = fit_bound(device, self.setup, *task)
+            bound = settle(device, self.setup, *task)
             return bound, jax.block_until_ready(bound_gradient(device, self.setup, task[0], bound))
 
         results = list(self._pool.map(one, zip(self.packed.chunks, self.guesses, strict=True)))

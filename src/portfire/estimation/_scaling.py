@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from portfire.dynamics import READOUTS, Setup
+from portfire.dynamics import READOUTS, Setup, spread_kernels
 from portfire.estimation._freedom import Freedom
 from portfire.estimation._stretch import n_stretches, pull_through, stretch, stretch_map
 from portfire.inference import Moments, Packed, Path
@@ -203,7 +203,7 @@ def make_scaling(
         outer[:, :d, :d] += spread
         units += (weight.T @ outer.reshape(len(features), -1)).reshape(units.shape)
         n_after = n_time - before
-        kernels, cue = setup.kernels(n_after), setup.cue_basis(n_after)
+        kernels, cue = spread_kernels(centre, setup, n_after), setup.cue_basis(n_after)
         step, lane = np.nonzero(mask[before + 1 :] * mask[before:-1])
         pushes = rows[lasting][:, lane] * kernels[lasting][:, step + 1]
         z = np.concatenate(

@@ -5,6 +5,7 @@ from portfire.inference._chain import Factor, factorise, invert_band, substitute
 from portfire.inference._chunk import Chunk, Packed, pack
 from portfire.inference._importance import Sampled, correction_size, draw_deviations, importance, lane_keys
 from portfire.inference._particles import Filtered, filter_particles, particle_posterior, refine
+from portfire.inference._scores import bound_scores
 from portfire.inference._smoother import (
     Moments,
     Path,
@@ -20,6 +21,7 @@ from portfire.inference._variational import (
     Guess,
     bound_gradient,
     fit_bound,
+    guess_of_posterior,
     start_guess,
     turn_guess,
 )
@@ -43,11 +45,13 @@ __all__ = [
     "factorise",
     "filter_particles",
     "fit_bound",
+    "guess_of_posterior",
     "importance",
     "invert_band",
     "lane_keys",
     "laplace",
     "laplace_gradient",
+    "bound_scores",
     "newton_sweep",
     "pack",
     "particle_posterior",

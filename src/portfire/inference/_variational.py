@@ -24,6 +24,7 @@ from portfire.inference._chunk import Chunk
 from portfire.inference._smoother import (
     Moments,
     Path,
+    Posterior,
     _begin,
     _Data,
     _moments,
@@ -31,6 +32,7 @@ from portfire.inference._smoother import (
     _prior_surrogate,
     _prior_terms,
     pair_index,
+    posterior_moments,
     start_path,
 )
 
@@ -78,6 +80,11 @@ def start_guess(setup: Setup, chunk: Chunk) -> Guess:
     """A path at zero, known exactly."""
     n_pairs = setup.latent_dim * (setup.latent_dim + 1) // 2
     return Guess(start_path(setup, chunk), jnp.zeros((n_pairs, chunk.mask.size)))
+
+
+def guess_of_posterior(posterior: Posterior) -> Guess:
+    """The Laplace posterior as a start: slower to come by, and near enough whatever the counts are."""
+    return Guess(posterior.mode, _pairs(posterior_moments(posterior).covariance))
 
 
 def turn_guess(guess: Guess, move: jax.Array) -> Guess:

@@ -16,6 +16,7 @@ from portfire.dynamics import READOUTS, ModelFile
 from portfire.job._atomic import write_dataset_atomic, write_json_atomic, write_table_atomic
 from portfire.job._evidence import Evidences
 from portfire.job._findings import Findings
+from portfire.job._lasting import describe_yardsticks, list_rivals_of, list_unseen
 from portfire.job._result import RESULT
 from portfire.job._stages import ALL, Size
 from portfire.job._store import Store
@@ -67,10 +68,16 @@ def write_outputs(
         "chosen": _chosen(findings),
         "accounts": _account_rows(findings, evidence, others, READOUTS[models[0].readout].of_counts),
         "contrasts": list(evidence.rows),
+        "rivals": [
+            row for source in findings.job.compare.sources for row in list_rivals_of(findings, store, source)
+        ],
+        "yardsticks": describe_yardsticks(findings, store),
+        "unseen_conditions": list_unseen(findings, store),
+        "checks": store.read_meta(findings.tested.checks)["checks"] if findings.tested.checks else [],
         "decode": [found.to_row() for found in findings.decodings],
         "settings": findings.job.to_dict(),
         "versions": library_versions(),
-        "not_run": list(findings.not_run),
+        "not_run": [*findings.not_run, *_absent_checks(findings, store)],
         "warnings": warnings,
     }
     write_json_atomic(out / RESULT, result)
@@ -129,6 +136,11 @@ def _other_models(findings: Findings, store: Store) -> list[pd.DataFrame]:
             )
         )
     return frames
+
+
+def _absent_checks(findings: Findings, store: Store) -> list[str]:
+    absent = store.read_meta(findings.tested.checks)["absent"] if findings.tested.checks else None
+    return [] if absent is None else [f"No predictive checks: {absent}."]
 
 
 def _sources(findings: Findings) -> tuple[str, ...]:

@@ -16,11 +16,13 @@ from portfire.comparison import (
     carrying_time_constant,
     contrast_sources,
     describe_mimic,
+    likelihood_ratio_p,
     overrule,
     reconcile,
 )
 from portfire.estimation import fit_from_parts
 from portfire.job._findings import Findings
+from portfire.job._lasting import describe_persistence, list_rivals_of, name_rival
 from portfire.job._stages import ALL
 from portfire.job._store import Store
 from portfire.session import explain_by_time
@@ -60,12 +62,33 @@ def collect_contrasts(findings: Findings, store: Store) -> Evidences:
     rows: list[dict[str, Any]] = []
     if sources:
         contrasts = {
-            shift: {c.source: c for c in contrast_sources(s, sources, level, min_gain)}
+            shift: {
+                c.source: c
+                for c in contrast_sources(
+                    s, sources, level, min_gain, {} if shift else _drawn(findings, store)
+                )
+            }
             for shift, s in by_shift.items()
         }
+        n_draws = findings.job.tests.bootstrap
+        if n_draws and 3 * len(sources) > level * (1 + n_draws):
+            warnings.append(
+                f"With {n_draws} bootstrap draws no p of {3 * len(sources)} entries can reach {level:g} "
+                f"after adjustment; set [tests] bootstrap to {3 * len(sources) / level:.0f} or more."
+            )
         for source in sources:
             rows.append(_row(findings, store, source, {s: found[source] for s, found in contrasts.items()}))
     return Evidences(tuple(rows), scores, n_train, tuple(warnings))
+
+
+def _drawn(findings: Findings, store: Store) -> dict[tuple[str, str], float]:
+    """Bootstrap p of every entry that has one; it takes the place of that of the likelihood ratio."""
+    return {
+        (source, name): float(tests["bootstrap"]["p"])
+        for source, key in findings.tested.routes.items()
+        for name, tests in store.read_meta(key).items()
+        if name in ("initial_unique", "sustained_unique", "total") and "bootstrap" in tests
+    }
 
 
 def _score_in_sample(findings: Findings, store: Store, shift: int) -> tuple[Scored, list[str]]:
@@ -156,6 +179,9 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         verdict = overrule(
             verdict, f"context is confounded with drift, since trial time explains {confounded:.0%} of it"
         )
+    failed = store.read_meta(findings.tested.checks)["failed"] if findings.tested.checks else None
+    if failed is not None and verdict.label != "undetermined":
+        verdict = overrule(verdict, failed)
     row: dict[str, Any] = {"source": source, **here.scores}
     for name, entry in here.entries.items():
         row[name] = entry.evidence.to_row()
@@ -169,6 +195,7 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
                 "df": entry.n_fixed or entry.n_params,
                 "boundary": bool(entry.cov_dims),
                 "p_raw": entry.p_raw,
+                "p_chi2": likelihood_ratio_p(entry.statistic, entry.n_fixed, entry.cov_dims),
             }
             for name, entry in here.entries.items()
         },
@@ -178,6 +205,16 @@ def _row(findings: Findings, store: Store, source: str, by_shift: dict[int, Cont
         "mimic": mimic,
         "carrying_mode": time_constant,
     }
+    row |= describe_persistence(findings, store, source)
+    rivals = list_rivals_of(findings, store, source)
+    if rivals:
+        row["rival"] = name_rival(rivals, verdict.label)
+        if row["rival"] is not None:
+            row["words"] += (
+                f" But {row['rival']} describes these data better than the pushes of this verdict."
+            )
+    if source in findings.tested.routes:
+        row["tests"] = store.read_meta(findings.tested.routes[source])
     if source == "context":
         row["time_r2"] = confounded
     if verdict.label == "undetermined":

@@ -79,9 +79,24 @@ class Decode:
 
 @dataclass(frozen=True)
 class Tests:
-    """The level of all tests."""
+    """How tests are done.
+
+    Parameters
+    ----------
+    level : float
+        Of all tests.
+    bootstrap : int
+        Sessions drawn at most for each p of the contrasts; 0: none are drawn.
+    assignment : {"free", "blocked", "sequence"}
+        How the task dealt intervals and contexts to trials.
+    unseen_conditions : bool
+        Whether every condition is predicted from the others.
+    """
 
     level: float
+    bootstrap: int = 0
+    assignment: str = "free"
+    unseen_conditions: bool = False
 
 
 @dataclass(frozen=True)

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from portfire.job._file import Job
 from portfire.job._stages import Sizes
+from portfire.job._tested import Tested
 from portfire.session import Trials
 from portfire.timing import Decoding
 
@@ -26,6 +27,8 @@ class Findings:
     describe, causal : str, tuple of str
         Keys of the described fit and of the causal states.
     warnings, not_run : tuple of str
+    tested : Tested
+        Keys of tests, rivals and checks.
     """
 
     job: Job
@@ -37,3 +40,4 @@ class Findings:
     causal: tuple[str, ...]
     warnings: tuple[str, ...]
     not_run: tuple[str, ...]
+    tested: Tested = field(default_factory=Tested)

@@ -15,7 +15,8 @@ from portfire.job._evidence import collect_contrasts
 from portfire.job._file import Job, check_job, session_name
 from portfire.job._findings import Findings
 from portfire.job._shared import write_trials
-from portfire.job._stages import ALL, Size, Sizes, Stages
+from portfire.job._stages import ALL, Sizes, Stages, shifted
+from portfire.job._tested import run_tests
 from portfire.job._workspace import Workspace
 from portfire.session import Trials, read_session
 from portfire.timing import Decoding, decode, describe_limits, round_cutoff
@@ -59,6 +60,7 @@ def _run_session(job: Job, workspace: Workspace) -> None:
     job = replace(job, compare=replace(job.compare, sources=present))
     stages = replace(stages, job=job)
     ladders = _run_ladders(stages, sizes)
+    tested = run_tests(stages, sizes, ladders)
     decodings = _run_decode(stages, sizes)
     describe, causal = _run_descriptions(stages, sizes)
     not_run = [
@@ -71,7 +73,10 @@ def _run_session(job: Job, workspace: Workspace) -> None:
         why = "no trial has a response" if job.decode.cutoffs_s else "the job names no cutoff"
         not_run.append(f"No decode: {why}.")
     warnings = describe_limits(decodings, job.tests.level)
-    findings = Findings(job, trials, sizes, ladders, decodings, describe, causal, warnings, tuple(not_run))
+    not_run += tested.not_run
+    findings = Findings(
+        job, trials, sizes, ladders, decodings, describe, causal, warnings, tuple(not_run), tested
+    )
     contrasts = collect_contrasts(findings, workspace.store)
     write_outputs(findings, contrasts, models, workspace)
     for row in contrasts.rows:
@@ -102,12 +107,6 @@ def _explain_absent(trials: Trials, source: str) -> str:
     if source == "context":
         return "no context column" if trials.context is None else "one context"
     return "no sample_s column" if trials.sample_s is None else "one sample interval"
-
-
-def shifted(size: Size, shift: int, n_units: int) -> Size | None:
-    """The size with one latent dimension more or fewer; None where there is no such model."""
-    d = size.latent_dim + shift
-    return replace(size, latent_dim=d) if 1 <= d <= n_units else None
 
 
 def _run_ladders(stages: Stages, sizes: Sizes) -> dict[tuple[int, int, str], str]:

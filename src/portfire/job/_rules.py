@@ -24,6 +24,10 @@ COLUMNS = (
 )
 
 
+# How a task may deal labels to trials.
+ASSIGNMENTS = ("free", "blocked", "sequence")
+
+
 @dataclass(frozen=True)
 class Rule:
     """One key of a job file.
@@ -73,6 +77,12 @@ def _number(holds: Callable[[float], bool]) -> Callable[[Any], float]:
         return float(value)
 
     return read
+
+
+def _flag(value: Any) -> bool:
+    if not isinstance(value, bool):
+        raise ValueError
+    return value
 
 
 def _text(value: Any) -> str:
@@ -149,6 +159,9 @@ RULES = (
     ),
     Rule("decode", "draws", 1000, "an integer, 1 or more", _integer(1)),
     Rule("tests", "level", 0.05, "a number between 0 and 1", _number(lambda x: 0 < x < 1)),
+    Rule("tests", "bootstrap", 0, "a number of draws, an integer, 0 or more", _integer(0)),
+    Rule("tests", "assignment", "free", f"one of {', '.join(ASSIGNMENTS)}", _word_in(ASSIGNMENTS)),
+    Rule("tests", "unseen_conditions", False, "true or false", _flag),
 )
 TABLES = tuple(dict.fromkeys(rule.table for rule in RULES if rule.table))
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -28,6 +28,14 @@ Split = tuple[tuple[int, ...], int | None]
 # With a dimension to spare a search creeps along a ridge; what it has after this many steps lacks a nat or
 # two in all, which is little beside the smallest gain worth having.
 MAX_ITERATIONS, NEIGHBOUR_ITERATIONS = 300, 50
+_OF_TESTS = (
+    "profile_push",
+    "test_routes",
+    "check_fit",
+    "score_rivals",
+    "score_unseen_units",
+    "score_unseen_condition",
+)
 
 
 @dataclass(frozen=True)
@@ -37,6 +45,12 @@ class Size:
     model: int
     latent_dim: int
     drift: bool
+
+
+def shifted(size: Size, shift: int, n_units: int) -> Size | None:
+    """The size with one latent dimension more or fewer; None where there is no such model."""
+    d = size.latent_dim + shift
+    return replace(size, latent_dim=d) if 1 <= d <= n_units else None
 
 
 @dataclass(frozen=True)
@@ -91,13 +105,15 @@ class Stages:
             deps=list(deps),
             kwargs=dict(kwargs),
         )
-        return Task(name, key, f"portfire.job._work:{function}", kwargs, tuple(deps), stage)
+        module = "_work_tests" if function in _OF_TESTS else "_work"
+        return Task(name, key, f"portfire.job.{module}:{function}", kwargs, tuple(deps), stage)
 
     def run(self, tasks: Sequence[Task]) -> dict[str, dict[str, Any]]:
         """Run tasks in the workspace."""
         return self.workspace.run(tasks, self.data)
 
-    def _common(self, size: Size, held_out: Sequence[int]) -> dict[str, Any]:
+    def common(self, size: Size, held_out: Sequence[int]) -> dict[str, Any]:
+        """What every fit of a size on a training set is told."""
         return {
             "model": model_to_dict(self.models[size.model]),
             "latent_dim": size.latent_dim,
@@ -114,7 +130,7 @@ class Stages:
         """Fit the full account to what is left when folds are held out, and score those."""
         what = "all trials" if not held_out else f"without fold {' and '.join(str(f + 1) for f in held_out)}"
         extra = {} if inner is None else {"inner": inner}
-        kwargs = {**self._common(size, held_out), "tolerance": SIZE_TOLERANCE, **extra}
+        kwargs = {**self.common(size, held_out), "tolerance": SIZE_TOLERANCE, **extra}
         name = f"{size.latent_dim} latent dimensions, {what}"
         return self.task("fit_full", name, "size", deps, **kwargs)
 
@@ -243,7 +259,7 @@ class Stages:
         held = [] if where == ALL else [where]
         tolerance = HELD_OUT_TOLERANCE if held else NEIGHBOUR_TOLERANCE if scored else ALL_TOLERANCE
         kwargs = {
-            **self._common(size, held),
+            **self.common(size, held),
             "tolerance": tolerance,
             "sources": list(sources),
             "score_training": scored,

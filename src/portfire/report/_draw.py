@@ -11,6 +11,7 @@ from portfire.report._decode import draw_decode
 from portfire.report._folder import read_run_folder
 from portfire.report._page import write_page
 from portfire.report._paths import draw_paths
+from portfire.report._persistence import draw_persistence
 from portfire.report._predicted import draw_predicted
 from portfire.report._pushes import draw_pushes
 from portfire.report._rates import draw_rates_overall
@@ -19,6 +20,7 @@ from portfire.report._style import Drawn, figure_style
 
 _FIGURES = (
     draw_contrasts,
+    draw_persistence,
     draw_scores,
     draw_behaviour,
     draw_paths,

@@ -32,7 +32,7 @@ _VARIABLES = {
     "latents.nc": {"state": 3, "initial": 2, "sustained": 2},
     "rates.nc": {"recorded": 3, "model": 3},
 }
-_LISTS = ("accounts", "contrasts", "decode", "sessions")
+_LISTS = ("accounts", "contrasts", "rivals", "checks", "unseen_conditions", "decode", "sessions")
 
 
 @dataclass(frozen=True)
@@ -170,7 +170,7 @@ def _read_result(out_dir: Path) -> dict[str, Any]:
         entries = result.get(key) or []
         if not isinstance(entries, list) or not all(isinstance(e, dict) for e in entries):
             raise InputError(f"{path}: {key!r} should be a list of objects, and is not.")
-    for key in ("session", "behaviour", "chosen", "settings", "versions"):
+    for key in ("session", "behaviour", "chosen", "yardsticks", "settings", "versions"):
         if not isinstance(result.get(key) or {}, dict):
             raise InputError(f"{path}: {key!r} should be an object, and is not.")
     return result

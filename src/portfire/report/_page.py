@@ -13,8 +13,10 @@ from portfire.report import _tables, _words
 from portfire.report._accounts import describe_levels
 from portfire.report._decode_words import state_decode
 from portfire.report._folder import RunFolder
+from portfire.report._persistence import state_persistence
 from portfire.report._rates import state_rates
 from portfire.report._style import Absent, Drawn, clean
+from portfire.report._tables_tests import list_checks, list_rivals, list_tests, list_unseen, state_yardsticks
 
 
 def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
@@ -35,11 +37,16 @@ def write_page(run: RunFolder, figures: Mapping[str, Drawn | Absent]) -> str:
         rates_sentences=state_rates(run),
         levels=describe_levels(run),
         by_time=_words.state_time(run),
+        yardsticks=state_yardsticks(run),
         by_fold=_words.state_by_fold(run),
         figures={key: _as_dict(figure) for key, figure in figures.items()},
         tables={
             "contrasts": _tables.list_contrasts(run),
             "dims": _tables.list_dims(run),
+            "tests": list_tests(run),
+            "rivals": list_rivals(run),
+            "checks": list_checks(run),
+            "unseen": list_unseen(run),
             "accounts": _tables.list_accounts(run),
             "sizes": _tables.list_sizes(run),
             "behaviour": _tables.list_behaviour(run),
@@ -114,6 +121,8 @@ def _card(contrast: Mapping[str, Any], run: RunFolder, n_used: int | None) -> di
                 _words.state_reason(contrast),
                 _words.state_open(contrast, n_used),
                 _words.state_evidence(contrast, run.min_gain),
+                state_persistence(contrast),
+                f"But {contrast['rival']} describes these data better." if contrast.get("rival") else None,
                 contrast.get("mimic"),
                 _words.state_dims(contrast, run.part("chosen").get("latent_dim")),
             )
