@@ -70,7 +70,13 @@ def test_a_bare_session_gets_the_defaults_of_the_interface(folder, monkeypatch):
             "min_gain": 0.05,
         },
         "decode": {"cutoffs_s": [0.1, 0.2, 0.3], "draws": 1000},
-        "tests": {"level": 0.05, "bootstrap": 0, "assignment": "free", "unseen_conditions": False},
+        "tests": {
+            "level": 0.05,
+            "thorough": False,
+            "bootstrap": 0,
+            "assignment": "free",
+            "unseen_conditions": False,
+        },
     }
     assert finite(settings) == settings
 

@@ -25,6 +25,10 @@ ACCOUNTS = [
     *[f"interval=both,context={route},trial=both" for route in ("none", "initial", "sustained")],
     *[f"interval=both,context=both,trial={route}" for route in ("none", "initial", "sustained")],
 ]
+NOT_THOROUGH = (
+    "No persistence, time course, rivals, tests that survive a wrong model, predictive checks or unseen "
+    "units: the job does not ask for them ([tests] thorough)."
+)
 FEATURES = ("initial", "sustained", "initial+sustained", "state", "counts")
 JOB = """\
 session = "session"
@@ -303,9 +307,40 @@ def test_a_bare_session_without_context_response_or_contrasts(tmp_path):
         "The source context is not contrasted: the session has no context column.",
         "No contrasts: the job names no source that this session has.",
         "No decode: no trial has a response.",
+        NOT_THOROUGH,
     ]
     assert pd.read_parquet(tmp_path / "out" / "decode.parquet").empty
     assert "<html" in (tmp_path / "out" / "report.html").read_text(encoding="utf-8")
+    assert all(np.isfinite(value) for _, value in numbers(result))
+
+
+def test_a_thorough_job_says_how_long_pushes_last_and_what_rivals_them(tmp_path):
+    write_session(tmp_path / "session")
+    text = JOB.replace("latent_dims = [1, 2]", 'latent_dims = [1]\nsources = ["context"]')
+    text = text.replace("cutoffs_s = [0.12, 0.2]", "cutoffs_s = []") + "[tests]\nthorough = true\n"
+    (tmp_path / "job.toml").write_text(text, encoding="utf-8")
+    job, out = str(tmp_path / "job.toml"), tmp_path / "out"
+    assert main(["run", job, "--out", str(out), "--workers", "2", "--quiet"]) == 0
+    result = json.loads((out / "result.json").read_text(encoding="utf-8"))
+    assert NOT_THOROUGH not in result["not_run"]
+    (row,) = result["contrasts"]
+    persistence = row["persistence_s"]
+    if persistence is None:
+        assert "two pushes" in row["persistence_words"]
+    else:
+        assert set(persistence) == {"estimate", "ci95", "at_next_dim", "at_previous_dim"}
+        low, high = persistence["ci95"]
+        assert low >= 0
+        assert high is None or high >= low
+    losses = row["persistence_profile"][0]["loss_nats"]
+    assert min(losses) == 0
+    assert len(losses) == 8
+    for name in ("blocks", "labels"):
+        assert 0 < row["tests"]["total"][name]["p"] <= 1
+    assert {rival["source"] for rival in result["rivals"]} == {"context"}
+    assert {check["check"] for check in result["checks"]}
+    assert np.isfinite(result["yardsticks"]["unseen_units_bits_per_spike"])
+    assert "Persistence" in (out / "report.html").read_text(encoding="utf-8")
     assert all(np.isfinite(value) for _, value in numbers(result))
 
 

@@ -85,6 +85,9 @@ class Tests:
     ----------
     level : float
         Of all tests.
+    thorough : bool
+        Whether persistence, time course, rivals, tests that survive a wrong model, predictive checks and
+        unseen units are computed too; they cost several times the rest of the job.
     bootstrap : int
         Sessions drawn at most for each p of the contrasts; 0: none are drawn.
     assignment : {"free", "blocked", "sequence"}
@@ -94,6 +97,7 @@ class Tests:
     """
 
     level: float
+    thorough: bool = False
     bootstrap: int = 0
     assignment: str = "free"
     unseen_conditions: bool = False

@@ -159,6 +159,7 @@ RULES = (
     ),
     Rule("decode", "draws", 1000, "an integer, 1 or more", _integer(1)),
     Rule("tests", "level", 0.05, "a number between 0 and 1", _number(lambda x: 0 < x < 1)),
+    Rule("tests", "thorough", False, "true or false", _flag),
     Rule("tests", "bootstrap", 0, "a number of draws, an integer, 0 or more", _integer(0)),
     Rule("tests", "assignment", "free", f"one of {', '.join(ASSIGNMENTS)}", _word_in(ASSIGNMENTS)),
     Rule("tests", "unseen_conditions", False, "true or false", _flag),

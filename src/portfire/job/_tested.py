@@ -66,18 +66,29 @@ def run_tests(stages: Stages, sizes: Sizes, ladders: Mapping[tuple[int, int, str
             f"linear dynamics, and {model.name} is {model.dynamics}."
         )
         return Tested(not_run=tuple(not_run))
-    whole = ladders[0, ALL, ""]
-    profiles = {
-        (shift, source): _profile_task(
-            stages, sizes, shift, ladders[shift, ALL, source if shift else ""], source
+    whole, asked = ladders[0, ALL, ""], stages.job.tests
+    profiles: dict[tuple[int, str], Task] = {}
+    routes: dict[str, Task] = {}
+    rivals: dict[str, Task] = {}
+    checks: list[Task] = []
+    if asked.thorough:
+        profiles = {
+            (shift, source): _profile_task(
+                stages, sizes, shift, ladders[shift, ALL, source if shift else ""], source
+            )
+            for shift in sorted({shift for shift, _, _ in ladders})
+            for source in sources
+        }
+        rivals = {s: _ask(stages, best, "score_rivals", f"rivals of the {s}", whole, s) for s in sources}
+        checks = [_ask(stages, best, "check_fit", "predictive checks", whole)]
+    else:
+        not_run.append(
+            "No persistence, time course, rivals, tests that survive a wrong model, predictive checks or "
+            "unseen units: the job does not ask for them ([tests] thorough)."
         )
-        for shift in sorted({shift for shift, _, _ in ladders})
-        for source in sources
-    }
-    routes = {s: _ask(stages, best, "test_routes", f"tests of the {s}", whole, s) for s in sources}
-    rivals = {s: _ask(stages, best, "score_rivals", f"rivals of the {s}", whole, s) for s in sources}
-    check = _ask(stages, best, "check_fit", "predictive checks", whole)
-    tasks = [*profiles.values(), *routes.values(), *rivals.values(), check]
+    if asked.thorough or asked.bootstrap:
+        routes = {s: _ask(stages, best, "test_routes", f"tests of the {s}", whole, s) for s in sources}
+    tasks = [*profiles.values(), *routes.values(), *rivals.values(), *checks]
     unseen: dict[int, Task] = {}
     if stages.job.tests.unseen_conditions:
         unseen = _unseen_tasks(stages, best, whole)
@@ -86,7 +97,7 @@ def run_tests(stages: Stages, sizes: Sizes, ladders: Mapping[tuple[int, int, str
     elif sources and len(stages.trials.conditions) > 1:
         not_run.append("No unseen conditions: the job does not ask for them ([tests] unseen_conditions).")
     units: list[Task] = []
-    if model.readout != "gaussian" and len(stages.trials.unit) > 1:
+    if asked.thorough and model.readout != "gaussian" and len(stages.trials.unit) > 1:
         fits = stages.full_fits([(best, fold) for fold in stages.folds], sizes)
         units = [
             stages.task(
@@ -103,7 +114,7 @@ def run_tests(stages: Stages, sizes: Sizes, ladders: Mapping[tuple[int, int, str
         {which: task.key for which, task in profiles.items()},
         {source: task.key for source, task in routes.items()},
         {source: task.key for source, task in rivals.items()},
-        check.key,
+        checks[0].key if checks else "",
         tuple(task.key for task in units),
         {condition: task.key for condition, task in unseen.items()},
         tuple(not_run),
