@@ -191,6 +191,6 @@ def measure_sweep(problem: Problem, n_rounds: int) -> tuple[Rounds, dict[str, fl
             "scipy_threads": with_one_blas_thread(partial(banded.threads, pool)),
         }
         rounds = interleave(tasks, n_rounds, n_best=2)
-    return rounds.fastest("floor", "floor_whole", "floor_in_chunks").fastest(
+    return rounds.fastest(
         "scipy", "scipy_one_thread", "scipy_threads"
     ), agreement

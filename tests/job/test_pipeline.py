@@ -19,6 +19,8 @@ from portfire.errors import InputError
 from portfire.estimation import load_fit
 from portfire.simulate import Scenario, draw_session
 
+from .._thorough import OF_THOROUGH_RUNS
+
 ACCOUNTS = [
     "interval=both,context=both,trial=both",
     *[f"interval={route},context=both,trial=both" for route in ("none", "initial", "sustained")],
@@ -96,6 +98,13 @@ def numbers(value: object, path: str = "result"):
             yield from numbers(part, f"{path}[{place}]")
     elif isinstance(value, int | float) and not isinstance(value, bool):
         yield path, value
+
+
+def names(value: object) -> set[str]:
+    """All keys in nested values."""
+    if isinstance(value, dict):
+        return set(value).union(*map(names, value.values()))
+    return set().union(*map(names, value)) if isinstance(value, list) else set()
 
 
 def test_result_has_what_the_interface_names(result):
@@ -340,6 +349,7 @@ def test_a_thorough_job_says_how_long_pushes_last_and_what_rivals_them(tmp_path)
     assert {rival["source"] for rival in result["rivals"]} == {"context"}
     assert {check["check"] for check in result["checks"]}
     assert np.isfinite(result["yardsticks"]["unseen_units_bits_per_spike"])
+    assert not OF_THOROUGH_RUNS - names(result)
     assert "Persistence" in (out / "report.html").read_text(encoding="utf-8")
     assert all(np.isfinite(value) for _, value in numbers(result))
 

@@ -59,7 +59,7 @@ class Fit:
         Map from the fit's coordinates to the canonical ones: orthonormal readout columns, ordered by
         the variance of log rate that they explain.
     value : float
-        Penalised Laplace log marginal likelihood of the training trials (nats).
+        Penalised variational lower bound on the log likelihood of the training trials (nats).
     trace : tuple of float
         Objective after every iteration.
     status : str
@@ -258,7 +258,7 @@ def fit(
     tolerance: float = 0.05,
     max_iterations: int = 300,
 ) -> Fit:
-    """Fit latent dynamics to the counts of single trials by Laplace marginal likelihood.
+    """Fit latent dynamics to the counts of single trials by a variational bound on their likelihood.
 
     Parameters
     ----------
