@@ -7,9 +7,11 @@ import re
 import sys
 import tomllib
 from collections.abc import Iterator
+from importlib import metadata
 from pathlib import Path
 
 import pytest
+from packaging.requirements import Requirement
 
 import portfire
 
@@ -121,3 +123,19 @@ def test_every_imported_package_is_declared(checkout: Path) -> None:
             if package not in declared:
                 missing[package] = f"{path.relative_to(SOURCE)}:{line}"
     assert not missing, f"imported but not in pyproject.toml: {missing}"
+
+
+def test_what_xarray_reads_and_writes_latents_with_comes_along(checkout: Path) -> None:
+    """The backend of h5netcdf is imported by name at run time, so that no import in the source shows it."""
+    project = tomllib.loads((checkout / "pyproject.toml").read_text(encoding="utf-8"))["project"]
+    left, brought = [re.split(r"[^\w.-]", text, maxsplit=1)[0] for text in project["dependencies"]], set()
+    while left:
+        name = left.pop().lower()
+        if name in brought:
+            continue
+        brought.add(name)
+        for text in metadata.requires(name) or []:
+            requirement = Requirement(text)
+            if requirement.marker is None or requirement.marker.evaluate({"extra": ""}):
+                left.append(requirement.name)
+    assert {"h5netcdf", "h5py"} <= brought
